@@ -1,0 +1,1 @@
+"""Estimator families; each file registers its own. See `contract` for the recipe."""

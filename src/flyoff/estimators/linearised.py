@@ -1,0 +1,134 @@
+"""The linearised (extended) Kalman filter with exact Jacobians, on manifold states.
+
+First-order filter of A. H. Jazwinski, "Stochastic Processes and Filtering Theory", Academic Press
+1970, theorem 8.1; covariance update in the form of P. Joseph (R. S. Bucy, P. D. Joseph, "Filtering
+for Stochastic Processes with Applications to Guidance", Wiley 1968, ch. 16); multiplicative
+rotation errors: E. J. Lefferts, F. L. Markley, M. D. Shuster, J. Guid. Control Dyn. 5(5):417-429,
+1982.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from typing import Any, Literal
+
+import numpy as np
+
+from flyoff.estimators.contract import (
+    Belief,
+    Fault,
+    Gaussian,
+    Innovation,
+    combine_faults,
+)
+from flyoff.estimators.gaussian_update import correct, correction_counts, missing_components
+from flyoff.models.model import Model, Sensor
+from flyoff.models.priors import Prior
+from flyoff.numerics import counts, linalg
+from flyoff.numerics.counts import Counts
+from flyoff.numerics.spaces import Array
+from flyoff.numerics.streams import Streams
+from flyoff.options import options
+from flyoff.registry import register
+
+__all__ = ["GaussianBelief", "Linearised"]
+
+
+@dataclass(frozen=True)
+class GaussianBelief(Belief):
+    """Mean (n, M) and tangent covariance (d, d, M)."""
+
+    mean: Array
+    cov: Array
+
+
+def gaussian_start(prior: Prior, dtype: Any) -> GaussianBelief:
+    """The belief of a Gaussian filter at the start: the prior's moments."""
+    mean, cov = prior.cast(dtype).moments()
+    cov = np.ascontiguousarray(np.broadcast_to(cov, (*cov.shape[:2], mean.shape[1])))
+    return GaussianBelief(0, np.zeros(mean.shape[1], np.uint8), mean, cov)
+
+
+@register("estimator", "linearised")
+@options
+class Linearised:
+    """Extended Kalman filter: first-order linearisation with exact sparse Jacobians.
+
+    Attributes
+    ----------
+    form : `joseph` or `short`
+        Covariance update: (I-KH) P (I-KH)' + K R K', or (I-KH) P.
+    """
+
+    form: Literal["joseph", "short"] = "joseph"
+
+    def suits(self, model: Model) -> str | None:
+        """Suits every model."""
+        return None
+
+    def batch(self, model: Model) -> int:
+        """Runs evaluated at once."""
+        return 512
+
+    def bind(self, model: Model, streams: Streams, dtype: Any = np.float64) -> _LinearisedFilter:
+        """A filter for the runs of `streams`."""
+        return _LinearisedFilter(self, model, np.dtype(dtype))
+
+
+class _LinearisedFilter:
+    def __init__(self, choice: Linearised, model: Model, dtype: np.dtype) -> None:
+        self.choice, self.model, self.dtype = choice, model, dtype
+
+    def start(self, prior: Prior) -> GaussianBelief:
+        return gaussian_start(prior, self.dtype)
+
+    def predict(self, belief: GaussianBelief, u: Array, dt: float) -> GaussianBelief:
+        mean, f = self.model.linearise(belief.mean, u, dt)
+        cov = linalg.product_t(linalg.product(f, belief.cov), f)
+        cov += self.model.added_noise(belief.mean, u, dt)
+        return GaussianBelief(belief.step + 1, belief.fault, mean, linalg.symmetrise(cov))
+
+    def update(
+        self, belief: GaussianBelief, sensor: Sensor, z: Array, u: Array
+    ) -> tuple[GaussianBelief, Innovation]:
+        space, p = self.model.space, self.model.parameters.astype(self.dtype, copy=False)
+        x, cov = belief.mean, belief.cov
+        predicted, h = sensor.linearise(x, u, p)
+        r = sensor.covariance(x, u, p)
+        missing = missing_components(z, x.shape[1])
+        residual = sensor.space.local(predicted, z)
+        if missing is not None:
+            h = np.where(missing[:, None], self.dtype.type(0), h)
+        cross = linalg.product_t(cov, h)
+        s = linalg.product(h, cross)
+        s = 0.5 * (s + np.swapaxes(s, 0, 1)) + r
+        c = correct(cross, s, residual, missing)
+        # X = (I - K H) P, then X (I - K H)' + K R K' = X - (X H' - K R) K', as rank-m products
+        new = cov - linalg.product_t(c.gain, cross)
+        if self.choice.form == "joseph":
+            rest = linalg.product_t(new, h) - linalg.product(c.gain, r)
+            new -= linalg.product_t(rest, c.gain)
+        new = space.reset(linalg.symmetrise(new), c.delta)
+        fault = combine_faults(belief.fault, ~c.ok, Fault.NOT_POSITIVE_DEFINITE)
+        after = replace(belief, fault=fault, mean=space.retract(x, c.delta), cov=new)
+        return after, c.innovation
+
+    def posterior(self, belief: GaussianBelief) -> Gaussian:
+        return Gaussian(belief.mean, belief.cov)
+
+    def operations(self, readings: Mapping[str, float]) -> Counts:
+        d, nz = self.model.space.d, self.model.f_pattern.nonzeros
+        total = self.model.linear_tape.counts() + self.model.q_tape.counts()
+        total += 2 * counts.sparse_product(nz, d, d) + Counts(add=self.model.q_pattern.nonzeros)
+        for name, rate in readings.items():
+            s = self.model.sensors[name]
+            m, hz = s.m, s.h_pattern.nonzeros
+            one = s.linear_tape.counts() + s.r_tape.counts() + correction_counts(d, m)
+            one += counts.sparse_product(hz, m, d) + counts.sparse_product(hz, m, m)
+            one += counts.product(d, m, d)
+            if self.choice.form == "joseph":
+                one += counts.sparse_product(hz, m, d) + 2 * counts.product(d, m, d)
+                one += counts.product(d, m, m)
+            total += rate * one
+        return total

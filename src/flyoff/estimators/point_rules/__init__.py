@@ -1,0 +1,1 @@
+"""Point rules, found by name; each is coefficients only. See `_skeleton`."""

@@ -1,0 +1,1 @@
+"""Intervals and paired comparisons over independent units."""

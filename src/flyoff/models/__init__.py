@@ -1,0 +1,1 @@
+"""What a filter may know: traced models, sensors, priors, kinematics, earth."""

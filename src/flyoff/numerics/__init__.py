@@ -1,0 +1,1 @@
+"""Arrays and symbols: spaces, traced tapes, batched linear algebra, streams, discretisation."""

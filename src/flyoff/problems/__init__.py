@@ -1,0 +1,1 @@
+"""Problems, one file each; see `contract` for the recipe."""

@@ -1,0 +1,1 @@
+"""Recorded problems: data sets read from files, one file each."""

@@ -1,0 +1,135 @@
+"""Consistency: does the filter's covariance describe its errors?
+
+NEES e' P^-1 e, jointly and by block, divided by the number of components; NIS of each sensor, with S
+from the prior covariance; containment within 1, 2 and 3 standard deviations. Y. Bar-Shalom,
+X. R. Li, T. Kirubarajan 2001, section 5.4.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from flyoff.filtering import Outcome, Step
+from flyoff.models.model import Model
+from flyoff.numerics import linalg
+from flyoff.numerics.spaces import Array
+from flyoff.problems.contract import Quantity
+from flyoff.registry import register
+from flyoff.scores.contract import Context, Divergence, Statistic
+
+__all__ = ["Consistency", "ConsistencyTrack", "assessable_sample"]
+
+
+def assessable_sample(d: int) -> float:
+    """Effective sample size below which the NEES of a weighted sample says nothing: 20 d.
+
+    With m samples E[NEES] = d (1 + 1/m)(m - 1)/(m - d - 2): 6 % high at m = 20 d, d large.
+    """
+    return 20.0 * d
+
+
+class ConsistencyTrack:
+    """NEES by block, containment and NIS by sensor, (T, M) each; NaN where not assessable."""
+
+    def __init__(self, context: Context) -> None:
+        self.context = context
+        space = context.model.space
+        shape = (context.steps, context.runs)
+        self.blocks = {"": list(range(space.d))}
+        if len(space.blocks) > 1:
+            self.blocks |= {b.name: space.indices([b.name]) for b in space.blocks}
+        self.nees = {name: np.full(shape, np.nan) for name in self.blocks}
+        self.inside = {name: np.full((3, *shape), np.nan, dtype=np.float32) for name in self.blocks}
+        self.nis = {s: np.full(shape, np.nan) for s in context.model.sensors}
+        self.count = {s: np.zeros(shape, dtype=np.int32) for s in context.model.sensors}
+        self.assessed = False
+
+    def observe(self, step: Step) -> None:
+        """Take in one step."""
+        row = step.k - 1
+        for name, innovation in step.innovations:
+            good = step.alive & (innovation.count > 0)
+            old = self.nis[name][row]
+            nis = np.where(np.isnan(old), 0, old) + innovation.nis
+            self.nis[name][row] = np.where(good, nis, old)
+            self.count[name][row] += np.where(good, innovation.count, 0)
+        if step.cov is None or step.factor is None:
+            return
+        space = self.context.model.space
+        e = space.local(step.mean, step.truth)
+        good = step.alive & np.isfinite(e).all(axis=0)
+        if step.ess is not None:
+            good &= step.ess >= assessable_sample(space.d)
+        if not good.any():
+            return
+        self.assessed = True
+        sigma = np.sqrt(np.einsum("iim->im", step.cov))
+        z = np.abs(e) / sigma
+        for name, index in self.blocks.items():
+            if len(index) == space.d:
+                low = step.factor
+            else:
+                low, _ = linalg.cholesky(step.cov[index][:, index])
+            value = linalg.lower_quadratic(low, e[index]) / len(index)
+            self.nees[name][row] = np.where(good, value, np.nan)
+            for s in range(3):
+                part = np.mean(z[index] <= s + 1, axis=0)
+                self.inside[name][s, row] = np.where(good, part, np.nan)
+
+
+@register("score", "consistency")
+class Consistency:
+    """NEES joint and by block, NIS by sensor, containment."""
+
+    def __init__(self, context: Context) -> None:
+        self.context = context
+        self.track = context.track(ConsistencyTrack)
+
+    def per_run(self, outcome: Outcome) -> dict[str, Array]:
+        """``window/nees[.block]/mean|inside-ks`` and ``window/nis.sensor/mean``."""
+        out: dict[str, Array] = {}
+        failed = outcome.fault != 0
+        with np.errstate(invalid="ignore", divide="ignore"):
+            for window in self.context.windows:
+                for name, nees in self.track.nees.items():
+                    key = f"{window.name}/nees{'.' + name if name else ''}"
+                    part = nees[window.slice]
+                    used = np.isfinite(part).sum(axis=0)
+                    mean = np.nansum(part, axis=0) / used
+                    out[f"{key}/mean"] = np.where(failed, np.nan, mean)
+                    out[f"{key}/assessed"] = used / part.shape[0]
+                    for s in range(3):
+                        inside = self.track.inside[name][s, window.slice].astype(float)
+                        share = np.nansum(inside, axis=0) / used
+                        out[f"{key}/inside-{s + 1}s"] = np.where(failed, np.nan, share)
+                for sensor, nis in self.track.nis.items():
+                    total = np.nansum(nis[window.slice], axis=0)
+                    mean = total / self.track.count[sensor][window.slice].sum(axis=0)
+                    out[f"{window.name}/nis.{sensor}/mean"] = np.where(failed, np.nan, mean)
+        return out
+
+    def profiles(self) -> dict[str, Array]:
+        """NEES over time."""
+        return {f"nees{'.' + name if name else ''}": v for name, v in self.track.nees.items()}
+
+    @staticmethod
+    def statistics(
+        quantities: Sequence[Quantity], model: Model, divergence: Divergence
+    ) -> list[Statistic]:
+        """Means with between-run intervals, in-band share of time, containment."""
+        blocks = [b.name for b in model.space.blocks] if len(model.space.blocks) > 1 else []
+        out = []
+        for name in ["nees", *(f"nees.{b}" for b in blocks)]:
+            d = model.space.d if name == "nees" else len(model.space.indices([name[5:]]))
+            out.append(Statistic(name, "mean", f"{name}/mean", "mean"))
+            out.append(Statistic(name, "median", f"{name}/mean", "median"))
+            out.append(
+                Statistic(name, "in-band", f"profile:{name}", "in-band", options={"size": d})
+            )
+            for s in (1, 2, 3):
+                out.append(Statistic(name, f"inside-{s}s", f"{name}/inside-{s}s", "mean"))
+        for sensor in model.sensors:
+            out.append(Statistic(f"nis.{sensor}", "mean", f"nis.{sensor}/mean", "mean"))
+        return out

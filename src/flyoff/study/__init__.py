@@ -1,0 +1,1 @@
+"""Experiments: configuration, plan, execution, store, tables."""
