@@ -54,10 +54,10 @@ class _KalmanFilter:
         return gaussian_start(prior, self.dtype)
 
     def predict(self, belief: GaussianBelief, u: Array, dt: float) -> GaussianBelief:
-        mean, f = self.model.linearise(belief.mean, u, dt)
+        mean, f, q = self.model.linearise(belief.mean, u, dt)
         f = _runs_first(f)
         cov = f @ _runs_first(belief.cov) @ np.swapaxes(f, 1, 2)
-        cov += _runs_first(self.model.added_noise(belief.mean, u, dt))
+        cov += _runs_first(q)
         return GaussianBelief(belief.step + 1, belief.fault, mean, _runs_last(cov))
 
     def update(

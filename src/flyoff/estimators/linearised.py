@@ -84,10 +84,10 @@ class _LinearisedFilter:
         return gaussian_start(prior, self.dtype)
 
     def predict(self, belief: GaussianBelief, u: Array, dt: float) -> GaussianBelief:
-        mean, f = self.model.linearise(belief.mean, u, dt)
-        cov = linalg.product_t(linalg.product(f, belief.cov), f)
-        cov += self.model.added_noise(belief.mean, u, dt)
-        return GaussianBelief(belief.step + 1, belief.fault, mean, linalg.symmetrise(cov))
+        mean, f, q = self.model.linearise(belief.mean, u, dt)
+        cov = linalg.symmetrise(linalg.product_t(linalg.product(f, belief.cov), f))
+        cov += q
+        return GaussianBelief(belief.step + 1, belief.fault, mean, cov)
 
     def update(
         self, belief: GaussianBelief, sensor: Sensor, z: Array, u: Array
@@ -119,8 +119,8 @@ class _LinearisedFilter:
 
     def operations(self, readings: Mapping[str, float]) -> Counts:
         d, nz = self.model.space.d, self.model.f_pattern.nonzeros
-        total = self.model.linear_tape.counts() + self.model.q_tape.counts()
-        total += 2 * counts.sparse_product(nz, d, d) + Counts(add=self.model.q_pattern.nonzeros)
+        total = self.model.linear_tape.counts() + self.model.noise_counts()
+        total += 2 * counts.sparse_product(nz, d, d)
         for name, rate in readings.items():
             s = self.model.sensors[name]
             m, hz = s.m, s.h_pattern.nonzeros

@@ -146,9 +146,9 @@ class _SigmaPointFilter:
         d, j = model.space.d, len(self.wm)
         # a triangular factor times sparse unit points: one product a nonzero
         draw = counts.cholesky(d) + Counts(add=j * d, mul=d * (d + 1))
-        total = draw + j * model.mean_tape.counts() + model.q_tape.counts()
+        total = draw + j * model.mean_tape.counts() + model.noise_counts()
         total += counts.product(d, j, 1) + Counts(add=d * j, mul=d * j)
-        total += counts.symmetric_product(d, j) + Counts(add=model.q_pattern.nonzeros)
+        total += counts.symmetric_product(d, j)
         for name, rate in readings.items():
             s = model.sensors[name]
             m = s.m

@@ -25,7 +25,8 @@ from typing import Any, Literal
 
 import numpy as np
 
-from flyoff.numerics import linalg
+from flyoff.numerics import algebra, counts, linalg
+from flyoff.numerics.counts import Counts
 from flyoff.numerics.spaces import Array, StateSpace
 from flyoff.numerics.tape import Pattern, Tape
 
@@ -197,9 +198,12 @@ class Model:
     mean_tape: Tape
     linear_tape: Tape
     f_pattern: Pattern
-    q_tape: Tape
-    q_pattern: Pattern
+    g_tape: Tape
+    g_pattern: Pattern
+    along_tape: Tape
+    by_direction: bool
     w_tape: Tape
+    w_pattern: Pattern
     linear: bool
     q_scale: float = 1.0
     memo: dict[Any, Array] = field(default_factory=dict, repr=False)
@@ -226,30 +230,95 @@ class Model:
         """Transition of points (n, ..., M) with process noise w (q, ..., M)."""
         return self.transition_tape(x, u, w, self._p(x), self._dt(x, dt))
 
-    def linearise(self, x: Array, u: Array, dt: float) -> tuple[Array, Array]:
-        """Predicted mean (n, M) and dense tangent Jacobian F (d, d, M) at `x`."""
-        out = self.linear_tape(x, u, self._p(x), self._dt(x, dt))
+    def linearise(self, x: Array, u: Array, dt: float) -> tuple[Array, Array, Array]:
+        """Predicted mean (n, M), tangent Jacobian F (d, d, M), added noise Q (d, d, M or 1)."""
         n, d = self.space.n, self.space.d
-        return out[:n], out[n:].reshape(d, d, -1)
+        if self.by_direction:
+            mean, fg = self._along(x, u, dt, d)
+            q = self._q_from(fg[:, d:], dt) if not self.q_is_common else self.added_noise(x, u, dt)
+            return mean, fg[:, :d], q
+        out = self.linear_tape(x, u, self._p(x), self._dt(x, dt))
+        return out[:n], out[n:].reshape(d, d, -1), self.added_noise(x, u, dt)
 
     def added_noise(self, x: Array, u: Array, dt: float) -> Array:
         """Tangent covariance G W G' (d, d, M or 1) that one step adds, at `x`."""
         if not self.q_is_common:
-            return self._added_noise(x, u, dt)
+            return self._q_from(self._noise_input(x, u, dt), dt)
         key = ("q", dt, x.dtype)
         if key not in self.memo:
-            self.memo[key] = self._added_noise(x[:, :1], u[:, :1], dt)
+            self.memo[key] = self._q_from(self._noise_input(x[:, :1], u[:, :1], dt), dt)
         return self.memo[key]
 
-    def _added_noise(self, x: Array, u: Array, dt: float) -> Array:
-        d = self.space.d
-        q = self.q_tape(x, u, self._p(x), self._dt(x, dt)).reshape(d, d, -1)
+    def _noise_input(self, x: Array, u: Array, dt: float) -> Array:
+        """Tangent Jacobian G (d, q, M) with respect to the process noise."""
+        if self.by_direction and self.noise.d:
+            return self._along(x, u, dt, 0)[1]
+        g = self.g_tape(x, u, self._p(x), self._dt(x, dt))
+        return g.reshape(self.space.d, self.noise.d, -1)
+
+    def _q_from(self, g: Array, dt: float) -> Array:
+        size = self.noise.d
+        if size == 0:
+            return np.zeros((self.space.d, self.space.d, 1), dtype=g.dtype)
+        w = self.w_tape(self._p(g), self._dt(g, dt)).reshape(size, size, 1)
+        q = linalg.symmetrise(linalg.product_t(linalg.product(g, w), g))
         return q if self.q_scale == 1.0 else q * q.dtype.type(self.q_scale)
+
+    def _along(self, x: Array, u: Array, dt: float, d: int) -> tuple[Array, Array]:
+        """Mean and derivatives along the first `d` tangent directions and all noise directions.
+
+        The directional derivative of the traced transition, with the directions as an array axis:
+        what depends on the point alone is worked out once, not once a direction.
+        """
+        space, n, q = self.space, self.space.n, self.noise.n
+        runs = x.shape[1]
+        vx = np.zeros((n, d + q, runs), dtype=x.dtype)
+        vw = np.zeros((q, d + q, 1), dtype=x.dtype)
+        for b in space.blocks if d else ():
+            a, t = space.ambient[b.name], space.tangent[b.name]
+            if b.ambient == b.tangent:
+                for i in range(b.ambient):
+                    vx[a.start + i, t.start + i] = 1
+            else:
+                w, i, j, k = 0.5 * x[a]
+                vx[a, t.start] = (-i, w, k, -j)
+                vx[a, t.start + 1] = (-j, -k, w, i)
+                vx[a, t.start + 2] = (-k, j, -i, w)
+        for i in range(q):
+            vw[i, d + i] = 1
+        out = self.along_tape(
+            x[:, None], u[:, None], self._p(x)[:, None], self._dt(x, dt)[:, None], vx, vw
+        )
+        mean, dy = out[:n, 0], out[n:]
+        if space.flat:
+            return mean, dy
+        moved = np.empty((space.d, *dy.shape[1:]), dtype=x.dtype)
+        for b in space.blocks:
+            a, t = space.ambient[b.name], space.tangent[b.name]
+            if b.ambient == b.tangent:
+                moved[t] = dy[a]
+            else:
+                turn = algebra.quat_mul(algebra.quat_conj(tuple(mean[a])), tuple(dy[a]))
+                for i in range(3):
+                    np.multiply(turn[i + 1], 2, out=moved[t.start + i])
+        return mean, moved
 
     @cached_property
     def q_is_common(self) -> bool:
         """Whether the added noise depends on neither state nor input."""
-        return not (self.q_tape.depends_on("x") or self.q_tape.depends_on("u"))
+        return not (self.g_tape.depends_on("x") or self.g_tape.depends_on("u"))
+
+    def noise_counts(self) -> Counts:
+        """Operations of `added_noise` with the traced sparsity; nothing where it is common."""
+        if self.q_is_common:
+            return Counts(add=self.space.d)
+        nz, d = self.g_pattern.nonzeros, self.space.d
+        return (
+            self.g_tape.counts()
+            + counts.sparse_product(nz, d, 1) * (self.w_pattern.nonzeros / max(self.noise.d, 1))
+            + counts.sparse_product(nz, d, d)
+            + Counts(add=d * d)
+        )
 
     def noise_factor(self, dt: float, dtype: Any) -> Array:
         """Lower factor of W(dt) (q, q, 1); zero rows are allowed (noise-free directions)."""
@@ -308,25 +377,41 @@ def trace(spec: ModelSpec) -> Model:
     new = _call(spec.transition, space, x, u, w, p, sdt[0])
     flat_w = _matrix(spec.noise_covariance, noise.d, p, sdt[0])
     zero = ca.SX.zeros(noise.n, 1)
-    mean = [ca.substitute(e, vw, zero) if noise.n else e for e in new]
-    e_new = _column(new)
-    jx = ca.jacobian(_column(mean), vx) if space.n else ca.SX(0, 0)
-    f = ca.sparsify(_from_tangent(space, mean) @ jx @ _to_tangent(space, sx))
-    g = ca.jacobian(e_new, vw)
-    g = _from_tangent(space, mean) @ (ca.substitute(g, vw, zero) if noise.n else g)
-    q = g @ flat_w @ g.T
+    mean = _substituted(new, vw, zero)
+    tangent = _symbols("delta", space.d)
+    near = _near(space, sx, tangent)
+
+    def derivative(out: StateSpace, at: list[Any], moved: list[Any], by: list[Any]) -> Any:
+        """Jacobian (out.d, len(by)) of local(at, moved) at by = 0."""
+        jac = ca.jacobian(_column(_first_order_local(out, at, moved)), _column(by))
+        if by:
+            jac = ca.substitute(jac, _column(by), ca.SX.zeros(len(by), 1))
+        return ca.sparsify(jac)
+
+    shifted = _call(spec.transition, space, space.unpack(near), u, w, p, sdt[0])
+    f = derivative(space, mean, _substituted(shifted, vw, zero), tangent)
+    g = derivative(space, mean, new, sw)
     f_pattern, f_values = _entries(f)
-    q_pattern, q_values = _entries(q)
-    w_values = _entries(flat_w)[1]
+    g_pattern, g_values = _entries(g)
+    w_pattern, w_values = _entries(flat_w)
 
     step_groups = {"x": vx, "u": vu, "p": vp, "dt": vdt}
+    ways = _symbols("vx", space.n), _symbols("vw", noise.n)
+    along = ca.jtimes(_column(new), ca.vertcat(vx, vw), ca.vertcat(*map(_column, ways)))
+    along = ca.substitute(along, vw, zero) if noise.n else along
+    along_groups = {**step_groups, "vx": _column(ways[0]), "vw": _column(ways[1])}
+    along_tape = Tape(along_groups, [*mean, *(along[i] for i in range(space.n))])
+    mean_tape = Tape(step_groups, mean)
+    linear_tape = Tape(step_groups, [*mean, *f_values])
+    g_tape = Tape(step_groups, g_values)
+    common = not (g_tape.depends_on("x") or g_tape.depends_on("u"))
+    entrywise = len(linear_tape.ops) + (0 if common else len(g_tape.ops))
     sensors = {}
     for s in spec.sensors:
         z = _call(s.measure, s.space, x, u, p)
         r = _matrix(s.covariance, s.space.d, x, u, p)
-        h = ca.sparsify(
-            _from_tangent(s.space, z) @ ca.jacobian(_column(z), vx) @ _to_tangent(space, sx)
-        )
+        z_near = _call(s.measure, s.space, space.unpack(near), u, p)
+        h = derivative(s.space, z, z_near, tangent)
         h_pattern, h_values = _entries(h)
         r_values = _entries(r)[1]
         groups = {"x": vx, "u": vu, "p": vp}
@@ -353,12 +438,16 @@ def trace(spec: ModelSpec) -> Model:
         parameter_names=tuple(spec.parameters),
         sensors=sensors,
         transition_tape=Tape({"x": vx, "u": vu, "w": vw, "p": vp, "dt": vdt}, new),
-        mean_tape=Tape(step_groups, mean),
-        linear_tape=Tape(step_groups, [*mean, *f_values]),
+        mean_tape=mean_tape,
+        linear_tape=linear_tape,
         f_pattern=f_pattern,
-        q_tape=Tape(step_groups, q_values),
-        q_pattern=q_pattern,
+        g_tape=g_tape,
+        g_pattern=g_pattern,
         w_tape=Tape({"p": vp, "dt": vdt}, w_values),
+        w_pattern=w_pattern,
+        along_tape=along_tape,
+        # an operation on all directions costs about two on single entries
+        by_direction=2 * len(along_tape.ops) < entrywise,
         linear=spec.linear,
     )
     if spec.linear:
@@ -430,41 +519,34 @@ def _first_line(why: Exception) -> str:
     return text[-1].strip() if text else type(why).__name__
 
 
-def _to_tangent(space: StateSpace, scalars: list[Any]) -> Any:
-    """d retract(x, delta)/d delta at zero: (n, d). A rotation moves by q (1, delta/2)."""
+def _substituted(values: list[Any], old: Any, new: Any) -> list[Any]:
     import casadi as ca
 
-    out = ca.SX(space.n, space.d)
+    return [ca.substitute(e, old, new) for e in values] if old.numel() else values
+
+
+def _near(space: StateSpace, scalars: list[Any], delta: list[Any]) -> list[Any]:
+    """First-order retraction: x + delta, and q (1, delta/2) for a rotation."""
+    out: list[Any] = []
     for b in space.blocks:
-        a, t = space.ambient[b.name], space.tangent[b.name]
+        x, d = scalars[space.ambient[b.name]], delta[space.tangent[b.name]]
         if b.ambient == b.tangent:
-            for i in range(b.ambient):
-                out[a.start + i, t.start + i] = 1
+            out.extend(a + e for a, e in zip(x, d, strict=True))
         else:
-            w, x, y, z = scalars[a]
-            cols = ((-x, w, z, -y), (-y, -z, w, x), (-z, y, -x, w))
-            for j, col in enumerate(cols):
-                for i in range(4):
-                    out[a.start + i, t.start + j] = col[i] / 2
+            out.extend(algebra.quat_mul(tuple(x), (1.0, d[0] / 2, d[1] / 2, d[2] / 2)))
     return out
 
 
-def _from_tangent(space: StateSpace, scalars: list[Any]) -> Any:
-    """d local(y, y + dy)/d y at y: (d, n). A rotation: 2 vec(conj(q) dq)."""
-    import casadi as ca
-
-    out = ca.SX(space.d, space.n)
+def _first_order_local(space: StateSpace, at: list[Any], moved: list[Any]) -> list[Any]:
+    """First-order inverse of the retraction: y - x, and 2 vec(conj(p) q) for a rotation."""
+    out: list[Any] = []
     for b in space.blocks:
-        a, t = space.ambient[b.name], space.tangent[b.name]
+        x, y = at[space.ambient[b.name]], moved[space.ambient[b.name]]
         if b.ambient == b.tangent:
-            for i in range(b.ambient):
-                out[t.start + i, a.start + i] = 1
+            out.extend(c - a for a, c in zip(x, y, strict=True))
         else:
-            w, x, y, z = scalars[a]
-            rows = ((-x, w, z, -y), (-y, -z, w, x), (-z, y, -x, w))
-            for j, row in enumerate(rows):
-                for i in range(4):
-                    out[t.start + j, a.start + i] = 2 * row[i]
+            q = algebra.quat_mul(algebra.quat_conj(tuple(x)), tuple(y))
+            out.extend(2 * c for c in q[1:])
     return out
 
 
@@ -501,7 +583,7 @@ def _verify(spec: ModelSpec, model: Model) -> None:
     names = (spec.space.unpack(x), spec.inputs.unpack(u), spec.noise.unpack(w))
     got = model.transition_tape(x, u, w, model.parameters, dt)
     _compare(spec.transition, spec.space, got, *names, p, 0.1)
-    mean, f = model.linearise(x, u, 0.1)
+    mean, f, _ = model.linearise(x, u, 0.1)
 
     def moved(delta: Array) -> Array:
         return spec.space.local(mean, model.step(spec.space.retract(x, delta), u, 0.1))

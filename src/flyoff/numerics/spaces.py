@@ -70,7 +70,7 @@ class StateSpace:
     """
 
     # A fixed number of passes keeps the result independent of how runs are batched.
-    _MEAN_PASSES = 4
+    _MEAN_PASSES = 2
 
     def __init__(self, *blocks: Block) -> None:
         self.blocks = blocks

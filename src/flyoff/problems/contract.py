@@ -170,6 +170,11 @@ class Problem(Protocol):
         ...
 
     @property
+    def truth_covariance(self) -> Array | None:
+        """Covariance (d, d) of the truth itself, added before NEES; None if it is exact."""
+        ...
+
+    @property
     def runs_by_default(self) -> int | None:
         """How many runs make sense where the data does not grow with them."""
         ...
@@ -201,6 +206,11 @@ class SimulatedProblem:
     @property
     def alignment(self) -> None:
         """None: errors are taken as they come."""
+        return None
+
+    @property
+    def truth_covariance(self) -> None:
+        """None: the truth is exact."""
         return None
 
     @property

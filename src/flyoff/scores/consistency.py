@@ -35,11 +35,16 @@ class ConsistencyTrack:
 
     def __init__(self, context: Context) -> None:
         self.context = context
-        space = context.model.space
+        space, truth = context.model.space, context.recording.truth
         shape = (context.steps, context.runs)
-        self.blocks = {"": list(range(space.d))}
+        # components without a truth counterpart are not assessed
+        known = np.isfinite(truth).any(axis=(0, 2))
+        has_truth = [known[space.ambient[b.name]].all() for b in space.blocks]
+        names = [b.name for b, has in zip(space.blocks, has_truth, strict=True) if has]
+        self.blocks = {"": space.indices(names)}
         if len(space.blocks) > 1:
-            self.blocks |= {b.name: space.indices([b.name]) for b in space.blocks}
+            self.blocks |= {name: space.indices([name]) for name in names}
+        self.exact = context.truth_covariance is None and len(names) == len(space.blocks)
         self.nees = {name: np.full(shape, np.nan) for name in self.blocks}
         self.inside = {name: np.full((3, *shape), np.nan, dtype=np.float32) for name in self.blocks}
         self.nis = {s: np.full(shape, np.nan) for s in context.model.sensors}
@@ -59,24 +64,27 @@ class ConsistencyTrack:
             return
         space = self.context.model.space
         e = space.local(step.mean, step.truth)
-        good = step.alive & np.isfinite(e).all(axis=0)
+        judged = self.blocks[""]
+        good = step.alive & np.isfinite(e[judged]).all(axis=0)
         if step.ess is not None:
             good &= step.ess >= assessable_sample(space.d)
         if not good.any():
             return
         self.assessed = True
-        sigma = np.sqrt(np.einsum("iim->im", step.cov))
-        z = np.abs(e) / sigma
+        cov = step.cov
+        if self.context.truth_covariance is not None:
+            cov = cov + self.context.truth_covariance[:, :, None]
+        z = np.abs(e) / np.sqrt(np.einsum("iim->im", cov))
+        inside = z <= np.array([1, 2, 3])[:, None, None]
         for name, index in self.blocks.items():
-            if len(index) == space.d:
+            if name == "" and self.exact:
                 low = step.factor
             else:
-                low, _ = linalg.cholesky(step.cov[index][:, index])
+                low, _ = linalg.cholesky(cov[index][:, index])
             value = linalg.lower_quadratic(low, e[index]) / len(index)
             self.nees[name][row] = np.where(good, value, np.nan)
-            for s in range(3):
-                part = np.mean(z[index] <= s + 1, axis=0)
-                self.inside[name][s, row] = np.where(good, part, np.nan)
+            share = inside[:, index].sum(axis=1, dtype=np.float32) / np.float32(len(index))
+            self.inside[name][:, row] = np.where(good, share, np.float32(np.nan))
 
 
 @register("score", "consistency")

@@ -71,6 +71,7 @@ class Context:
     divergence: Divergence
     recording: Recording
     alignment: Alignment | None = None
+    truth_covariance: Array | None = None
     tracks: dict[type, Any] = field(default_factory=dict)
 
     def track(self, kind: type[T]) -> T:
