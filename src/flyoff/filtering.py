@@ -27,7 +27,7 @@ from flyoff.numerics import linalg
 from flyoff.numerics.spaces import Array
 from flyoff.recordings import Recording
 
-__all__ = ["Late", "Observer", "Outcome", "Step", "run_filter"]
+__all__ = ["Late", "Observer", "Outcome", "Step", "arrival_table", "run_filter"]
 
 Late = Literal["apply", "drop", "replay"]
 
@@ -106,7 +106,7 @@ def run_filter(
     if runs < 2:
         raise ValueError("a batch of one run must be padded to two")
     watchers = list(observers)
-    arrivals, depth = _arrivals(recording, model, late)
+    arrivals, depth = arrival_table(recording, model, late)
     fault = np.zeros(runs, np.uint8)
     fault_step = np.zeros(runs, np.int64)
     dt = recording.dt
@@ -141,7 +141,7 @@ def run_filter(
     return Outcome(fault, fault_step)
 
 
-def _arrivals(
+def arrival_table(
     recording: Recording, model: Model, late: Late
 ) -> tuple[dict[int, list[tuple[int, int, str, Array]]], int]:
     """Readings by arrival step, in order of stamp and sensor; and how far back a replay reaches."""

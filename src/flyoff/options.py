@@ -22,8 +22,10 @@ from flyoff.registry import discover
 __all__ = [
     "UNITS",
     "Count",
+    "Flag",
     "Fraction",
     "NonNegative",
+    "Number",
     "OneOf",
     "Positive",
     "Unit",
@@ -140,10 +142,12 @@ class OneOf:
         return core_schema.no_info_wrap_validator_function(wrap, tagged)
 
 
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
-NonNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
-Fraction = Annotated[float, Field(ge=0, le=1)]
-Count = Annotated[int, Field(ge=1)]
+Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
+Positive = Annotated[float, Field(strict=True, gt=0, allow_inf_nan=False)]
+NonNegative = Annotated[float, Field(strict=True, ge=0, allow_inf_nan=False)]
+Fraction = Annotated[float, Field(strict=True, ge=0, le=1)]
+Flag = Annotated[bool, Field(strict=True)]
+Count = Annotated[int, Field(strict=True, ge=1)]
 
 if TYPE_CHECKING:
 

@@ -67,6 +67,28 @@ class Recording:
         """The recording with its last run repeated once."""
         return self._take(np.array([*range(len(self.runs)), len(self.runs) - 1]))
 
+    def stretch(self, first: int, steps: int) -> Recording:
+        """`steps` steps from step `first` on, as a recording of its own (for timing)."""
+        last = min(first + steps, self.steps)
+        readings = []
+        for r in self.readings:
+            inside = (r.steps > first) & (r.arrivals <= last)
+            readings.append(
+                replace(
+                    r,
+                    steps=r.steps[inside] - first,
+                    arrivals=r.arrivals[inside] - first,
+                    values=r.values[inside],
+                )
+            )
+        return replace(
+            self,
+            times=self.times[first : last + 1],
+            truth=self.truth[first : last + 1],
+            inputs=self.inputs[first:last],
+            readings=tuple(readings),
+        )
+
     def _take(self, index: Array) -> Recording:
         return replace(
             self,

@@ -47,10 +47,10 @@ class Particle:
         Resample a run whose effective sample size is below this fraction of the particles.
     """
 
-    particles: Annotated[int, Field(ge=2, le=1_000_000)] = 1000
+    particles: Annotated[int, Field(strict=True, ge=2, le=1_000_000)] = 1000
     proposal: Literal["bootstrap"] = "bootstrap"
     resampling: Literal["systematic"] = "systematic"
-    threshold: Annotated[float, Field(gt=0, le=1)] = 0.5
+    threshold: Annotated[float, Field(strict=True, gt=0, le=1)] = 0.5
 
     def suits(self, model: Model) -> str | None:
         """Only states small enough for a bootstrap filter."""

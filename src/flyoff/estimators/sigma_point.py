@@ -26,7 +26,7 @@ from flyoff.numerics import counts, linalg
 from flyoff.numerics.counts import Counts
 from flyoff.numerics.spaces import Array
 from flyoff.numerics.streams import Streams
-from flyoff.options import OneOf, options
+from flyoff.options import Flag, OneOf, options
 from flyoff.registry import register
 
 __all__ = ["SigmaPoint"]
@@ -45,7 +45,7 @@ class SigmaPoint:
     """
 
     points: Annotated[PointRule, OneOf("point-rule", "rule")] = Scaled()
-    redraw: bool = True
+    redraw: Flag = True
 
     def suits(self, model: Model) -> str | None:
         """Suits every model."""

@@ -251,7 +251,9 @@ class Model:
 
     def _noise_input(self, x: Array, u: Array, dt: float) -> Array:
         """Tangent Jacobian G (d, q, M) with respect to the process noise."""
-        if self.by_direction and self.noise.d:
+        if self.noise.d == 0:
+            return np.zeros((self.space.d, 0, 1), dtype=x.dtype)
+        if self.by_direction:
             return self._along(x, u, dt, 0)[1]
         g = self.g_tape(x, u, self._p(x), self._dt(x, dt))
         return g.reshape(self.space.d, self.noise.d, -1)

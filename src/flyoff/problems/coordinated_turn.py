@@ -16,7 +16,7 @@ from flyoff.models.model import Model, ModelSpec, SensorSpec, trace
 from flyoff.numerics import algebra, discretise
 from flyoff.numerics.spaces import Angle, StateSpace, Vector
 from flyoff.numerics.streams import Streams
-from flyoff.options import Count, NonNegative, Positive, Unit, options
+from flyoff.options import Count, NonNegative, Number, Positive, Unit, options
 from flyoff.problems.contract import Expectation, Quantity, SimulatedProblem, block_error
 from flyoff.recordings import Recording, draw_start, simulate
 from flyoff.registry import register
@@ -41,7 +41,7 @@ class CoordinatedTurn(SimulatedProblem):
     bearing_sigma: Annotated[Positive, Unit("rad")] = 10**0.5 * 1e-3
     acceleration_density: Annotated[Positive, Unit("m^2/s^3")] = 0.1
     turn_density: Annotated[Positive, Unit("rad^2/s^3")] = 1.75e-4
-    turn_rate: Annotated[float, Unit("rad/s")] = -3 * _DEG
+    turn_rate: Annotated[Number, Unit("rad/s")] = -3 * _DEG
     speed: Annotated[Positive, Unit("m/s")] = 300.0
     position_sigma: Annotated[Positive, Unit("m")] = 10.0
     velocity_sigma: Annotated[Positive, Unit("m/s")] = 10**0.5

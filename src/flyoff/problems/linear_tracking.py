@@ -35,13 +35,13 @@ class LinearTracking(SimulatedProblem):
     """A drifting balloon, position fixes with missing components; the Kalman filter is exact."""
 
     acceleration_density: Annotated[Positive, Unit("m^2/s^3")] = 0.02
-    acceleration_correlation: Annotated[float, Field(gt=-1, lt=1)] = 0.4
+    acceleration_correlation: Annotated[float, Field(strict=True, gt=-1, lt=1)] = 0.4
     fix_sigma: Annotated[Positive, Unit("m")] = 4.0
-    fix_correlation: Annotated[float, Field(gt=-1, lt=1)] = 0.3
+    fix_correlation: Annotated[float, Field(strict=True, gt=-1, lt=1)] = 0.3
     missing: Annotated[Fraction, Unit("1")] = 0.2
     position_sigma: Annotated[Positive, Unit("m")] = 20.0
     velocity_sigma: Annotated[Positive, Unit("m/s")] = 2.0
-    start_correlation: Annotated[float, Field(gt=-1, lt=1)] = 0.5
+    start_correlation: Annotated[float, Field(strict=True, gt=-1, lt=1)] = 0.5
     step: Annotated[Positive, Unit("s")] = 1.0
     steps: Count = 100
 

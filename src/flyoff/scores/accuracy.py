@@ -11,7 +11,7 @@ from flyoff.models.model import Model
 from flyoff.numerics.spaces import Array
 from flyoff.problems.contract import Quantity
 from flyoff.registry import register
-from flyoff.scores.contract import Context, Divergence, Statistic
+from flyoff.scores.contract import Context, Divergence, PlainScore, Statistic
 
 __all__ = ["EDGES", "Accuracy", "ErrorTrack"]
 
@@ -53,7 +53,7 @@ class ErrorTrack:
 
 
 @register("score", "accuracy")
-class Accuracy:
+class Accuracy(PlainScore):
     """rms, quantiles, maximum and a histogram of each error magnitude."""
 
     def __init__(self, context: Context) -> None:

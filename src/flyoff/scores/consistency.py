@@ -17,7 +17,7 @@ from flyoff.numerics import linalg
 from flyoff.numerics.spaces import Array
 from flyoff.problems.contract import Quantity
 from flyoff.registry import register
-from flyoff.scores.contract import Context, Divergence, Statistic
+from flyoff.scores.contract import Context, Divergence, PlainScore, Statistic
 
 __all__ = ["Consistency", "ConsistencyTrack", "assessable_sample"]
 
@@ -50,6 +50,8 @@ class ConsistencyTrack:
         self.nis = {s: np.full(shape, np.nan) for s in context.model.sensors}
         self.count = {s: np.zeros(shape, dtype=np.int32) for s in context.model.sensors}
         self.assessed = False
+        # error and standard deviation of every component of the first run, for a figure
+        self.example = np.full((2, context.steps, space.d), np.nan)
 
     def observe(self, step: Step) -> None:
         """Take in one step."""
@@ -64,6 +66,8 @@ class ConsistencyTrack:
             return
         space = self.context.model.space
         e = space.local(step.mean, step.truth)
+        self.example[0, row] = np.where(step.alive[0], e[:, 0], np.nan)
+        self.example[1, row] = np.sqrt(step.cov[range(space.d), range(space.d), 0])
         judged = self.blocks[""]
         good = step.alive & np.isfinite(e[judged]).all(axis=0)
         if step.ess is not None:
@@ -88,7 +92,7 @@ class ConsistencyTrack:
 
 
 @register("score", "consistency")
-class Consistency:
+class Consistency(PlainScore):
     """NEES joint and by block, NIS by sensor, containment."""
 
     def __init__(self, context: Context) -> None:
@@ -122,16 +126,21 @@ class Consistency:
         """NEES over time."""
         return {f"nees{'.' + name if name else ''}": v for name, v in self.track.nees.items()}
 
+    def traces(self) -> dict[str, Array]:
+        """Error and standard deviation (T, d) of the first run."""
+        return {"error": self.track.example[0], "sigma": self.track.example[1]}
+
     @staticmethod
     def statistics(
         quantities: Sequence[Quantity], model: Model, divergence: Divergence
     ) -> list[Statistic]:
         """Means with between-run intervals, in-band share of time, containment."""
         blocks = [b.name for b in model.space.blocks] if len(model.space.blocks) > 1 else []
+        heavy = {"heavy_tail": True}
         out = []
         for name in ["nees", *(f"nees.{b}" for b in blocks)]:
             d = model.space.d if name == "nees" else len(model.space.indices([name[5:]]))
-            out.append(Statistic(name, "mean", f"{name}/mean", "mean"))
+            out.append(Statistic(name, "mean", f"{name}/mean", "mean", options=heavy))
             out.append(Statistic(name, "median", f"{name}/mean", "median"))
             out.append(
                 Statistic(name, "in-band", f"profile:{name}", "in-band", options={"size": d})
@@ -139,5 +148,6 @@ class Consistency:
             for s in (1, 2, 3):
                 out.append(Statistic(name, f"inside-{s}s", f"{name}/inside-{s}s", "mean"))
         for sensor in model.sensors:
-            out.append(Statistic(f"nis.{sensor}", "mean", f"nis.{sensor}/mean", "mean"))
+            key = f"nis.{sensor}/mean"
+            out.append(Statistic(f"nis.{sensor}", "mean", key, "mean", options=heavy))
         return out

@@ -5,7 +5,8 @@
 2. What it needs step by step is a **track**, asked for with ``context.track(TrackClass)``: several
    scores share one. ``observe(step)`` of a track takes in one step of the time loop.
 3. ``per_run()`` returns arrays over runs, (M,) or (M, bins), by a key ``window/quantity/what``.
-4. ``profiles()`` returns arrays (T, M) by name; the store keeps their sums over runs.
+4. ``profiles()`` returns arrays (T, M) by name; the store keeps their sums over runs. ``traces()``
+   returns arrays of the batch's first run, of which the store keeps that of run 0.
 5. ``statistics(context)`` says, as data, which table rows follow from which keys by which reduction;
    the reductions live in `flyoff.evidence`. A score never looks at other runs.
 
@@ -26,7 +27,7 @@ from flyoff.numerics.spaces import Array
 from flyoff.problems.contract import Alignment, Quantity
 from flyoff.recordings import Recording
 
-__all__ = ["Context", "Divergence", "Score", "Statistic", "Window"]
+__all__ = ["Context", "Divergence", "PlainScore", "Score", "Statistic", "Window", "held"]
 
 T = TypeVar("T")
 
@@ -127,12 +128,28 @@ class Score(Protocol):
         """Arrays (T, M) by name."""
         ...
 
+    def traces(self) -> dict[str, Array]:
+        """Arrays of the first run."""
+        ...
+
     @staticmethod
     def statistics(
         quantities: Sequence[Quantity], model: Model, divergence: Divergence
     ) -> list[Statistic]:
         """Which rows follow."""
         ...
+
+
+class PlainScore:
+    """Defaults of a score that keeps no profiles and no trace."""
+
+    def profiles(self) -> dict[str, Array]:
+        """None."""
+        return {}
+
+    def traces(self) -> dict[str, Array]:
+        """None."""
+        return {}
 
 
 def held(mask: Array, steps: int) -> Array:

@@ -19,13 +19,13 @@ from flyoff.problems.contract import Quantity
 from flyoff.registry import register
 from flyoff.scores.accuracy import ErrorTrack
 from flyoff.scores.consistency import ConsistencyTrack
-from flyoff.scores.contract import Context, Divergence, Statistic, held
+from flyoff.scores.contract import Context, Divergence, PlainScore, Statistic, held
 
 __all__ = ["LostRuns"]
 
 
 @register("score", "lost-runs")
-class LostRuns:
+class LostRuns(PlainScore):
     """Failed, diverged, never-converged and overconfident runs."""
 
     def __init__(self, context: Context) -> None:
@@ -75,10 +75,6 @@ class LostRuns:
             lost = failed | never | diverged
             out["all/runs/overconfident"] = (over & ~lost).astype(float)
         return out
-
-    def profiles(self) -> dict[str, Array]:
-        """None."""
-        return {}
 
     @staticmethod
     def statistics(

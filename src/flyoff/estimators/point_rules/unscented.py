@@ -9,7 +9,7 @@ from pydantic import Field
 
 from flyoff.errors import UserError
 from flyoff.estimators.points import PointSet, star
-from flyoff.options import NonNegative, options
+from flyoff.options import NonNegative, Number, options
 from flyoff.registry import register
 
 __all__ = ["Scaled", "Symmetric"]
@@ -28,9 +28,9 @@ class Scaled:
     """
 
     rule: Literal["scaled"] = "scaled"
-    alpha: Annotated[float, Field(gt=0, le=1)] = 0.5
+    alpha: Annotated[float, Field(strict=True, gt=0, le=1)] = 0.5
     beta: NonNegative = 2.0
-    kappa: float = 0.0
+    kappa: Number = 0.0
 
     def points(self, d: int) -> PointSet:
         """The point set for dimension `d`."""
@@ -52,7 +52,7 @@ class Symmetric:
     """
 
     rule: Literal["symmetric"] = "symmetric"
-    kappa: float | Literal["gaussian"] = "gaussian"
+    kappa: Number | Literal["gaussian"] = "gaussian"
 
     def points(self, d: int) -> PointSet:
         """The point set for dimension `d`."""

@@ -1,0 +1,280 @@
+"""Figures of a study. The only importer of matplotlib and seaborn."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import matplotlib as mpl
+import numpy as np
+
+mpl.use("Agg")
+import matplotlib.pyplot as plt
+import seaborn as sns
+from matplotlib.figure import Figure
+
+from flyoff.api import Study
+from flyoff.evidence.intervals import nees_band
+from flyoff.study.config import ProblemEntry
+from flyoff.study.table import WHOLE, CellData
+
+__all__ = ["write_figures"]
+
+# colour-blind safe (P. Tol, "Colour schemes", SRON technical note, 2021: the muted scheme), and
+# never colour alone: a marker and a line style each
+_COLOURS = (
+    "#332288", "#CC6677", "#117733", "#DDAA33", "#88CCEE", "#AA4499", "#44AA99", "#661100",
+    "#999933", "#555555",
+)  # fmt: skip
+_MARKERS = "osD^vPX<>h"
+_LINES = ("-", "--", "-.", ":", (0, (5, 1)), (0, (3, 1, 1, 1, 1, 1)))
+_INK = "#222222"
+
+
+def write_figures(study: Study, folder: Path, advance: Callable[[], None] | None = None) -> list[Path]:
+    """Three figures a condition: errors with +-3 sigma, NEES over time, accuracy against cost.
+
+    Returns the files, named ``<what>-<condition>.png``.
+    """
+    folder.mkdir(parents=True, exist_ok=True)
+    style = {
+        "font.size": 8.5, "axes.titlesize": 9, "axes.labelsize": 8.5, "legend.fontsize": 8.5,
+        "axes.edgecolor": "#888888", "axes.linewidth": 0.7, "text.color": _INK,
+        "axes.labelcolor": _INK, "xtick.color": _INK, "ytick.color": _INK,
+        "grid.color": "#e3e3e3", "grid.linewidth": 0.6, "savefig.dpi": 130,
+    }  # fmt: skip
+    out = []
+    with sns.axes_style("whitegrid"), mpl.rc_context(style):
+        for condition in study.experiment.conditions:
+            cells = [c for c in study.cells if c.cell.condition is condition]
+            if not cells:
+                continue
+            for name, draw in (
+                ("errors", _errors),
+                ("nees", _nees),
+                ("accuracy-cost", _accuracy_cost),
+            ):
+                figure = draw(study, cells)
+                file = folder / f"{name}-{condition.name}.png"
+                figure.savefig(file, metadata={"Software": "flyoff"})
+                plt.close(figure)
+                out.append(file)
+                if advance is not None:
+                    advance()
+    return out
+
+
+def _look(study: Study, name: str) -> dict[str, Any]:
+    names = [e.name for e in study.experiment.estimators]
+    i = names.index(name)
+    return {"color": _COLOURS[i % len(_COLOURS)], "marker": _MARKERS[i % len(_MARKERS)]}
+
+
+def _line(study: Study, name: str) -> dict[str, Any]:
+    names = [e.name for e in study.experiment.estimators]
+    i = names.index(name)
+    return {"color": _COLOURS[i % len(_COLOURS)], "linestyle": _LINES[i % len(_LINES)]}
+
+
+def _by_problem(study: Study, cells: list[CellData]) -> list[tuple[ProblemEntry, list[CellData]]]:
+    out = []
+    for p in study.experiment.problems:
+        own = [c for c in cells if c.cell.problem is p]
+        if own:
+            out.append((p, own))
+    return out
+
+
+def _shown_component(problem: ProblemEntry) -> tuple[int, str, str, float]:
+    """Index, name, unit and factor of the error component drawn for a problem."""
+    space = problem.problem.filter_model().space
+    first = problem.problem.quantities[0]
+    block = getattr(first.error, "block", space.blocks[0].name)
+    index = space.tangent[block].start
+    name, unit = space.components()[index]
+    if unit == first.unit:
+        unit, factor = first.shown_unit, first.shown_factor
+    else:
+        factor = 1.0
+    return index, name, unit, factor
+
+
+def _errors(study: Study, cells: list[CellData]) -> Figure:
+    groups = _by_problem(study, cells)
+    names = [e.name for e in study.experiment.estimators]
+    used = [n for n in names if any(c.cell.estimator.name == n for c in cells)]
+    figure, axes = plt.subplots(
+        len(groups), len(used), figsize=(1.0 + 2.1 * len(used), 0.9 + 1.75 * len(groups)),
+        squeeze=False, layout="constrained",
+    )  # fmt: skip
+    for row, (problem, own) in enumerate(groups):
+        index, component, unit, factor = _shown_component(problem)
+        by_name = {c.cell.estimator.name: c for c in own}
+        limit = 0.0
+        for c in own:
+            sigma = c.traces["sigma"][:, index] * factor
+            error = np.abs(c.traces["error"][:, index] * factor)
+            # the settled part decides the scale; a lost run leaves the panel
+            tail = slice(len(sigma) // 5, None)
+            seen = np.concatenate([3 * sigma[tail], np.minimum(error, 9 * sigma)[tail]])
+            seen = seen[np.isfinite(seen)]
+            if len(seen):
+                limit = max(limit, float(np.quantile(seen, 0.99)))
+        for column, name in enumerate(used):
+            ax = axes[row, column]
+            c = by_name.get(name)
+            if c is None:
+                ax.axis("off")
+                if row == 0:
+                    ax.set_title(name)
+                continue
+            t = problem.problem.step * np.arange(1, len(c.traces["sigma"]) + 1)
+            sigma = 3 * c.traces["sigma"][:, index] * factor
+            look = _line(study, name)
+            ax.fill_between(t, -sigma, sigma, color=look["color"], alpha=0.16, linewidth=0)
+            ax.plot(t, sigma, color=look["color"], linewidth=0.7)
+            ax.plot(t, -sigma, color=look["color"], linewidth=0.7)
+            ax.plot(t, c.traces["error"][:, index] * factor, color=_INK, linewidth=0.8)
+            if limit > 0:
+                ax.set_ylim(-1.15 * limit, 1.15 * limit)
+            ax.set_xlim(0, t[-1])
+            if row == 0:
+                ax.set_title(name)
+            if column == 0:
+                ax.set_ylabel(f"{problem.name}\n{component} [{unit}]")
+            else:
+                ax.tick_params(labelleft=False)
+            ax.set_xlabel("time [s]", labelpad=1)
+    condition = cells[0].cell.condition.name
+    figure.suptitle(
+        f"Error of run 0 (dark line) within the filter's own ±3 sigma (shaded): {condition}",
+        fontsize=10,
+    )
+    return figure
+
+
+def _grid(count: int, legend: bool = True) -> tuple[Figure, list[Any]]:
+    columns = min(count, 2)
+    rows = math.ceil(count / columns)
+    figure, axes = plt.subplots(
+        rows, columns, figsize=(4.6 * columns, 2.9 * rows + 0.8), squeeze=False,
+        layout="constrained",
+    )  # fmt: skip
+    flat = list(axes.ravel())
+    for ax in flat[count:]:
+        ax.axis("off")
+    return figure, flat[:count]
+
+
+def _legend(figure: Figure, axes: list[Any]) -> None:
+    seen: dict[str, Any] = {}
+    for ax in axes:
+        for handle, label in zip(*ax.get_legend_handles_labels(), strict=True):
+            seen.setdefault(label, handle)
+    figure.legend(
+        list(seen.values()), list(seen), loc="outside lower center", ncols=min(len(seen), 5),
+        frameon=False,
+    )  # fmt: skip
+
+
+def _nees(study: Study, cells: list[CellData]) -> Figure:
+    groups = _by_problem(study, cells)
+    figure, axes = _grid(len(groups))
+    for ax, (problem, own) in zip(axes, groups, strict=True):
+        size = problem.problem.filter_model().space.d
+        top = 2.0
+        for c in own:
+            total, count = c.profiles["nees"]
+            seen = count > 0
+            if not seen.any():
+                continue
+            t = problem.problem.step * np.arange(1, len(total) + 1)[seen]
+            value = _smooth(total[seen] / count[seen], problem)
+            top = max(top, float(np.quantile(value, 0.995)))
+            name = c.cell.estimator.name
+            ax.plot(t, value, label=name, linewidth=1.1, **_line(study, name))
+        low, high = nees_band(size, problem.runs)
+        if problem.problem.recorded:
+            title = f"{problem.name}: a recording, no band"
+        else:
+            ax.axhspan(float(low), float(high), color="#bbbbbb", alpha=0.55, linewidth=0, zorder=0,
+                       label="95 % band of a consistent filter")  # fmt: skip
+            title = f"{problem.name}: {problem.runs} runs, d = {size}"
+        for edge in (0.8, 1.25):
+            ax.axhline(edge, color="#777777", linewidth=0.7, linestyle=(0, (1, 2)))
+        ax.set_yscale("log")
+        ax.set_ylim(0.3, max(3.0, 1.3 * top))
+        ax.yaxis.set_major_formatter(mpl.ticker.FuncFormatter(lambda v, _: f"{v:g}"))
+        ax.set_title(title)
+        ax.set_xlabel("time [s]")
+        ax.set_ylabel("NEES / d, mean over runs")
+    _legend(figure, axes)
+    condition = cells[0].cell.condition.name
+    figure.suptitle(
+        f"Normalised NEES over time: {condition} (dotted: practical band 0.8 to 1.25; "
+        "above: overconfident)",
+        fontsize=10,
+    )
+    return figure
+
+
+def _smooth(value: Any, problem: ProblemEntry) -> Any:
+    """Mean over 1/200 of the run: a recording at 100 Hz would draw as a black patch."""
+    width = max(1, len(value) // 200)
+    kernel = np.ones(width) / width
+    padded = np.pad(value, (width // 2, width - 1 - width // 2), mode="edge")
+    return np.convolve(padded, kernel, mode="valid")
+
+
+def _accuracy_cost(study: Study, cells: list[CellData]) -> Figure:
+    groups = _by_problem(study, cells)
+    figure, axes = _grid(len(groups))
+    table = study.table
+    for ax, (problem, own) in zip(axes, groups, strict=True):
+        q = problem.problem.quantities[0]
+        recorded = problem.problem.recorded
+        window = WHOLE if recorded else problem.windows[-1][0]
+        statistic = "rmse" if recorded else "rmse-typical"
+        here = table[
+            (table.problem == problem.name) & (table.condition == own[0].cell.condition.name)
+        ]
+        for c in own:
+            name = c.cell.estimator.name
+            mine = here[here.estimator == name]
+            error = mine[
+                (mine.quantity == q.name) & (mine.statistic == statistic)
+            ].set_index("window")
+            cost = mine[(mine.quantity == "step") & (mine.statistic == "time")]
+            if cost.empty or window not in error.index:
+                continue
+            y = float(error.loc[window, "value"])
+            if recorded:
+                parts = error.loc[[w for w, _, _ in problem.windows], "value"]
+                low, high = float(parts.min()), float(parts.max())
+            else:
+                low, high = float(error.loc[window, "low"]), float(error.loc[window, "high"])
+            x, x_low, x_high = (float(cost[k].iloc[0]) for k in ("value", "low", "high"))
+            look = _look(study, name)
+            bars = [[max(y - low, 0)], [max(high - y, 0)]] if low == low else None
+            ax.errorbar(
+                x, y, yerr=bars, xerr=[[x - x_low], [x_high - x]], label=name, linestyle="none",
+                markersize=6, capsize=2.5, elinewidth=0.9, markeredgecolor="white",
+                markeredgewidth=0.6, ecolor=look["color"], **look,
+            )  # fmt: skip
+        ax.set_xscale("log")
+        ax.xaxis.set_major_formatter(mpl.ticker.FuncFormatter(lambda v, _: f"{v:g}"))
+        ax.margins(x=0.18, y=0.2)
+        what = "rms, range of segments" if recorded else f"typical rms, `{window}`"
+        ax.set_title(problem.name)
+        ax.set_xlabel("time a run and step [us], amortised over a batch")
+        ax.set_ylabel(f"{q.name} [{q.shown_unit}]\n{what}")
+    _legend(figure, axes)
+    condition = cells[0].cell.condition.name
+    figure.suptitle(
+        f"Accuracy against cost: {condition} (bars: 95 % interval over runs; extremes of the "
+        "timing rounds)",
+        fontsize=10,
+    )
+    return figure

@@ -1,0 +1,221 @@
+"""The plan: which blocks an experiment needs, and what they will cost, before anything is spent."""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from flyoff.filtering import run_filter
+from flyoff.models.model import Model
+from flyoff.numerics.streams import Streams
+from flyoff.problems.conditions import apply_to_model, apply_to_recording, initial_error_scale
+from flyoff.recordings import Recording
+from flyoff.registry import discover
+from flyoff.scores.contract import Context, Window
+from flyoff.study.config import Entry, Experiment, ProblemEntry
+from flyoff.study.store import CHUNK, content_key
+
+__all__ = [
+    "Block",
+    "Cell",
+    "CellEstimate",
+    "Unit",
+    "blocks",
+    "cells",
+    "estimate",
+    "make_context",
+    "make_recording",
+    "make_scores",
+    "units",
+]
+
+_CHUNKS_A_BATCH = 8
+
+
+@dataclass(frozen=True)
+class Cell:
+    """One estimator on one problem under one condition."""
+
+    problem: ProblemEntry
+    condition: Entry
+    estimator: Entry
+
+    @property
+    def steps(self) -> int:
+        """Prediction steps of one run."""
+        return round(self.problem.problem.duration / self.problem.problem.step)
+
+
+@dataclass(frozen=True)
+class Block:
+    """One chunk of runs of one cell."""
+
+    cell: Cell
+    first: int
+    last: int
+    key: str
+
+
+@dataclass(frozen=True)
+class Unit:
+    """Work that shares recordings: one problem, one condition, one batch of runs."""
+
+    seed: int
+    late: Any
+    problem: ProblemEntry
+    condition: Entry
+    blocks: tuple[Block, ...]
+
+    @property
+    def runs(self) -> tuple[int, int]:
+        """First and last run (exclusive)."""
+        return min(b.first for b in self.blocks), max(b.last for b in self.blocks)
+
+
+def cells(experiment: Experiment) -> list[Cell]:
+    """All cells, in the order of the file."""
+    return [
+        Cell(p, c, e)
+        for p in experiment.problems
+        for c in experiment.conditions
+        if c.applies(p.name)
+        for e in experiment.estimators
+        if e.applies(p.name)
+    ]
+
+
+def blocks(experiment: Experiment, cell: Cell) -> list[Block]:
+    """The chunks of a cell."""
+    out = []
+    for first in range(0, cell.problem.runs, CHUNK):
+        last = min(first + CHUNK, cell.problem.runs)
+        key = content_key(
+            problem=cell.problem.problem,
+            label=cell.problem.name,
+            condition=cell.condition.what,
+            estimator=cell.estimator.what,
+            windows=cell.problem.windows,
+            divergence=cell.problem.divergence,
+            late=experiment.late,
+            runs=[first, last],
+            seed=experiment.seed,
+            purpose="test",
+            precision="double",
+        )
+        out.append(Block(cell, first, last, key))
+    return out
+
+
+def units(experiment: Experiment, needed: Sequence[Block]) -> list[Unit]:
+    """Group blocks that share a recording, the longest first."""
+    groups: dict[tuple[str, str, int], list[Block]] = {}
+    for b in needed:
+        batch = b.first // (CHUNK * _CHUNKS_A_BATCH)
+        key = (b.cell.problem.name, b.cell.condition.name, batch)
+        groups.setdefault(key, []).append(b)
+    out = [
+        Unit(
+            experiment.seed,
+            experiment.late,
+            group[0].cell.problem,
+            group[0].cell.condition,
+            tuple(group),
+        )
+        for group in groups.values()
+    ]
+    return sorted(out, key=lambda u: -sum(_weight(b) for b in u.blocks))
+
+
+def _weight(block: Block) -> float:
+    """Rough share of the work, for the order only: steps cost about as much as 200 runs' worth."""
+    cell = block.cell
+    particles = getattr(cell.estimator.what, "particles", 1)
+    size = cell.problem.problem.filter_model().space.d
+    return cell.steps * (200 + (block.last - block.first) * particles / 3) * size
+
+
+def make_recording(
+    problem: ProblemEntry, condition: Entry, streams: Streams
+) -> tuple[Model, Recording]:
+    """Filter model and recording of a batch under a condition."""
+    model = apply_to_model(condition.what, problem.problem.filter_model())
+    recording = problem.problem.record(streams, initial_error_scale(condition.what))
+    return model, apply_to_recording(condition.what, recording, streams)
+
+
+def make_context(problem: ProblemEntry, model: Model, recording: Recording) -> Context:
+    """What the scores of a batch may know."""
+    dt, last = recording.dt, recording.steps
+    windows = []
+    for name, start, end in problem.windows:
+        # a step belongs to the window that holds its end
+        first = max(1, math.floor(start / dt + 1e-9) + 1)
+        windows.append(Window(name, first, min(last, math.floor(end / dt + 1e-9))))
+    p = problem.problem
+    return Context(
+        model,
+        p.quantities,
+        tuple(windows),
+        problem.divergence,
+        recording,
+        p.alignment,
+        p.truth_covariance,
+    )
+
+
+def make_scores(context: Context) -> list[Any]:
+    """One of every registered score for a batch; they ask the context for their tracks."""
+    return [cls(context) for cls in discover("score").values()]
+
+
+@dataclass(frozen=True)
+class CellEstimate:
+    """Cost of a cell before it is run."""
+
+    cell: Cell
+    seconds: float
+    megabytes: float
+
+
+def estimate(experiment: Experiment, probe_steps: int = 12) -> list[CellEstimate]:
+    """Measure a few steps of every estimator on every problem and scale up.
+
+    One process; the number of processes divides the sum.
+    """
+    out = []
+    for p in experiment.problems:
+        runs = min(p.runs, CHUNK * _CHUNKS_A_BATCH)
+        streams = Streams(experiment.seed, "timing", p.name, range(max(2, runs)))
+        model, recording = make_recording(p, Entry("", ()), streams)
+        recording = recording.stretch(recording.steps // 2, probe_steps)
+        truth = 8e-6 * np.prod(recording.truth.shape[1:]) * round(p.problem.duration / p.problem.step)
+        for cell in cells(experiment):
+            if cell.problem is not p:
+                continue
+            seconds, batch = _probe(cell, model, recording, streams)
+            per_step = seconds / recording.steps
+            scores = 8e-6 * cell.steps * batch * (len(p.problem.quantities) + 6)
+            total = per_step * cell.steps * math.ceil(p.runs / batch)
+            out.append(CellEstimate(cell, total, truth + scores))
+    return out
+
+
+def _probe(
+    cell: Cell, model: Model, recording: Recording, streams: Streams
+) -> tuple[float, int]:
+    batch = max(2, min(cell.estimator.what.batch(model), len(recording.runs)))
+    part = slice(0, batch)
+    few, own = recording.select(part), streams.select(part)
+    context = make_context(cell.problem, model, few)
+    best = math.inf
+    for _ in range(2):
+        make_scores(context)
+        start = time.perf_counter()
+        run_filter(cell.estimator.what.bind(model, own), model, few, context.tracks.values())
+        best = min(best, time.perf_counter() - start)
+    return best, batch
