@@ -67,7 +67,7 @@ def select(experiment: Experiment, only: Sequence[str]) -> Experiment:
     UserError
         For a name that the experiment does not have.
     """
-    kept: dict[str, tuple[Any, ...]] = {}
+    kept: dict[str, Any] = {}
     known: set[str] = set()
     for kind in ("problems", "conditions", "estimators"):
         entries = getattr(experiment, kind)
@@ -117,9 +117,7 @@ def run(
         table = build_table(data, costs)
         manifest = _manifest(experiment, plan)
         _write(folder, experiment, table, manifest)
-    return Study(
-        experiment, folder, table, runs_frame(data), pd.Series(manifest), data, repaired
-    )
+    return Study(experiment, folder, table, runs_frame(data), pd.Series(manifest), data, repaired)
 
 
 def write_report(study: Study, progress: Progress | None = None) -> list[Path]:

@@ -1,8 +1,8 @@
 """The only time loop: a filter on a recording, observed step by step.
 
 Late readings are handled the same way for every candidate: `apply` uses them on arrival as if they
-were current, `drop` leaves them out, `replay` goes back to the belief at the time stamp, corrects it
-and repeats what came after. A run that fails is marked with the step and the reason and plays no
+were current, `drop` leaves them out, `replay` goes back to the belief at the time stamp, corrects
+it and repeats what came after. A run that fails is marked with the step and the reason and plays no
 further part; the others go on.
 """
 
@@ -75,7 +75,7 @@ class Outcome:
 
 @dataclass
 class _Past:
-    """One remembered step: the belief before its updates, its readings, the input that led to it."""
+    """One remembered step: the belief before its updates, its input, its readings."""
 
     before: Any
     u: Array
@@ -129,7 +129,8 @@ def run_filter(
             posterior = bound.posterior(belief)
             mean, cov, ess = moments(model.space, posterior)
             low, sound = (None, None) if cov is None else linalg.cholesky(cov)
-            new = combine_faults(belief.fault, ~np.isfinite(mean).all(axis=0), Fault.NON_FINITE)
+            lost: Array = ~np.isfinite(mean).all(axis=0)
+            new = combine_faults(belief.fault, lost, Fault.NON_FINITE)
             if sound is not None and isinstance(posterior, Gaussian):
                 new = combine_faults(new, ~sound, Fault.NOT_POSITIVE_DEFINITE)
             fresh = (new != 0) & (fault == 0)

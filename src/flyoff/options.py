@@ -109,7 +109,7 @@ class Unit:
                     return convert(value, self.unit)
                 except ValueError as why:
                     raise PydanticCustomError("unit", str(why).replace("{", "{{")) from None
-            from_file = bool(info.context) and info.context.get("from_file", False)
+            from_file = (info.context or {}).get("from_file", False)
             if from_file and UNITS[self.unit][0] != "ratio" and value != 0:
                 hint = f"a unit, as in `{value} {self.unit}`"
                 raise PydanticCustomError("unit", f"needs {hint}")
@@ -152,7 +152,9 @@ Count = Annotated[int, Field(strict=True, ge=1)]
 if TYPE_CHECKING:
 
     @dataclass_transform(frozen_default=True, kw_only_default=True)
-    def options(cls: type) -> type: ...
+    def options(cls: type) -> type:
+        """Class decorator: a frozen, keyword-only dataclass, validated."""
+        ...
 
 else:
 

@@ -112,10 +112,20 @@ def test_draws_depend_on_their_name_only(kind, space):
     for cut in (slice(0, 2), slice(5, 11), slice(18, 20)):
         part = prior.runs(cut).sample(streams().select(cut), "draw", 7)
         np.testing.assert_array_equal(part, whole[..., cut])
+    # runs picked one by one, the last of them twice, as a padded batch does
     index = np.array([4, 19, 19])
-    part = prior.runs(index)
-    for a, b in zip(part.moments(), prior.moments(), strict=True):
-        np.testing.assert_array_equal(a, b[..., index])
+    draws = prior.runs(index).sample(Streams(3, "test", "prior", index.tolist()), "draw", 7)
+    np.testing.assert_array_equal(draws, whole[..., index])
+
+
+@pytest.mark.parametrize("kind", MAKERS)
+@pytest.mark.parametrize("space", [FLAT, CURVED], ids=["flat", "curved"])
+def test_moments_do_not_depend_on_the_batch(kind, space):
+    prior = MAKERS[kind](space, 0.3)
+    for index in (slice(2, 9), np.array([4, 5]), np.array([7, 19, 19])):
+        part = prior.runs(index)
+        for a, b in zip(part.moments(), prior.moments(), strict=True):
+            np.testing.assert_array_equal(a, b[..., index])
 
 
 @pytest.mark.parametrize("kind", MAKERS)

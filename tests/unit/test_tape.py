@@ -108,6 +108,62 @@ def test_an_operation_without_counterpart_is_refused_by_name():
         tape_of(lambda x: [ca.erf(x[0])], {"x": 1})
 
 
+def branching(x):
+    """Selects of several kinds, nested, whose conditions can all hold, all fail, or differ."""
+    a, b, c = x
+    s, k = np.sin(a), np.cos(a)
+    inner = np.where(a < 1, s / (1 + b * b), k * b)
+    outer = np.where(b < 1, inner * c, inner + np.exp(-c * c))
+    either = np.where(c < 1, outer, 0.0)
+    series = a * a * a - 2 * a + s
+    return [outer, either, np.where(a < 1, series, outer / (2 + k)), s + k, 3.0]
+
+
+@pytest.mark.parametrize("dtype", DTYPES)
+def test_uniform_and_mixed_branches_give_the_same_bits(dtype):
+    # whether the other runs of the batch take the same branch must not matter
+    tape = tape_of(branching, {"x": 3})
+    rng = np.random.default_rng(10)
+    below = rng.uniform(-3, 0.9, (3, 12)).astype(dtype)
+    above = rng.uniform(1.1, 4, (3, 12)).astype(dtype)
+    some = rng.uniform(-3, 4, (3, 12)).astype(dtype)
+    some[:, 0] = np.nan
+    mixed = tape(np.concatenate([below, above, some], axis=1))
+    tolerance = 1e-14 if dtype is np.float64 else 1e-5
+    for x, got in zip((below, above, some), np.split(mixed, 3, axis=1), strict=True):
+        np.testing.assert_array_equal(tape(x), got)
+        want = [np.broadcast_to(w, 12) for w in branching(x.astype(float))]
+        np.testing.assert_allclose(got, want, rtol=tolerance, atol=tolerance)
+    # single runs as well, and one run repeated
+    for m in range(36):
+        x = np.concatenate([below, above, some], axis=1)[:, m : m + 1]
+        np.testing.assert_array_equal(tape(np.repeat(x, 2, axis=1))[:, 0], mixed[:, m])
+
+
+def test_a_branch_on_a_common_parameter():
+    tape = tape_of(
+        lambda x, p: [np.where(p[0] > 0, np.sin(x[0]) * x[1], np.exp(x[1]) - x[0])],
+        {"x": 2, "p": 1},
+    )
+    a, b = x = np.random.default_rng(11).standard_normal((2, 3, 8))
+    for value, want in ((1.0, np.sin(a) * b), (-1.0, np.exp(b) - a)):
+        for p in (np.full((1, 1), value), np.full((1, 8), value)):
+            np.testing.assert_allclose(tape(x, p)[0], want, rtol=1e-14)
+    signs = np.where(np.arange(8) % 2, 1.0, -1.0)
+    want = np.where(signs > 0, np.sin(a) * b, np.exp(b) - a)
+    np.testing.assert_allclose(tape(x, signs[None])[0], want, rtol=1e-14)
+
+
+def test_the_branch_not_taken_does_no_harm():
+    # a division by zero behind a select does not show
+    tape = tape_of(lambda x: [np.where(x[0] == 0, 1.0, np.sin(x[0]) / x[0])], {"x": 1})
+    for x in ([[0.0, 0.0]], [[0.0, 0.5]], [[0.5, 0.5]]):
+        with np.errstate(all="ignore"):
+            got = tape(np.array(x))[0]
+        want = [1.0 if v == 0 else math.sin(v) / v for v in x[0]]
+        np.testing.assert_allclose(got, want, rtol=1e-15)
+
+
 # -- sines and cosines of one angle ----------------------------------------------------------------
 
 

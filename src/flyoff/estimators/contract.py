@@ -82,26 +82,39 @@ class Innovation:
     Attributes
     ----------
     residual : (m, M), zero where missing
-    nis : (M,), residual' S^-1 residual over the present components
-    count : (M,), how many components were present
+    factor : (m, m, M), lower factor L of S, unit rows where missing
+    white : (m, M), L^-1 residual
+    missing : (m, M) or None, which components were absent
     ess : (M,) or None, effective sample size after weighting
-    factor : (m, m, M), lower factor of S, unit rows where missing; None for a weighted sample
     likelihood : (M,) or None, log likelihood where it does not follow from the factor
     """
 
     residual: Array
-    nis: Array
-    count: Array
+    factor: Array
+    white: Array
+    missing: Array | None = None
     ess: Array | None = None
-    factor: Array | None = None
     likelihood: Array | None = None
 
     @property
+    def nis(self) -> Array:
+        """Residual' S^-1 residual over the present components (M,), worked out when asked for."""
+        return np.einsum("mr,mr->r", self.white, self.white)
+
+    @property
+    def count(self) -> Array:
+        """How many components were present (M,)."""
+        m, runs = self.residual.shape
+        if self.missing is None:
+            return np.full(runs, m)
+        out: Array = m - self.missing.sum(axis=0)
+        return out
+
+    @property
     def log_likelihood(self) -> Array:
-        """Log likelihood of the reading (M,), worked out when asked for."""
+        """Log likelihood of the reading (M,)."""
         if self.likelihood is not None:
             return self.likelihood
-        assert self.factor is not None
         log_det = np.log(np.einsum("iim->im", self.factor)).sum(axis=0)
         out: Array = -0.5 * self.nis - log_det - 0.5 * LOG_2PI * self.count
         return out

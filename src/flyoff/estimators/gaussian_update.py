@@ -53,20 +53,16 @@ def correct(cross: Array, s: Array, residual: Array, missing: Array | None) -> C
     if missing is not None:
         s, residual = mask_missing(s, residual, missing)
         cross = np.where(missing[None], cross.dtype.type(0), cross)
-        count = m - missing.sum(axis=0)
-    else:
-        count = np.full(residual.shape[1:], m)
     low, ok = linalg.cholesky(s)
     # one substitution for C' and the residual together
     both = np.empty((m, cross.shape[0] + 1, residual.shape[1]), cross.dtype)
-    both[:, :-1] = np.swapaxes(cross, 0, 1)
+    both[:, :-1] = cross.swapaxes(0, 1)
     both[:, -1] = residual
     linalg.solve_lower(low, both)
     half, white = both[:, :-1], both[:, -1]
-    delta = np.einsum("mdr,mr->dr", half, white)
-    nis = np.einsum("mr,mr->r", white, white)
-    gain = np.swapaxes(linalg.back_substitute(low, half.copy()), 0, 1)
-    return Correction(gain, half, delta, ok, Innovation(residual, nis, count, factor=low))
+    delta = linalg.einsum("mdr,mr->dr", half, white)
+    gain = linalg.back_substitute(low, half.copy()).swapaxes(0, 1)
+    return Correction(gain, half, delta, ok, Innovation(residual, low, white, missing))
 
 
 def correction_counts(d: int, m: int) -> Counts:

@@ -2,7 +2,7 @@
 
 R. E. Kalman, "A new approach to linear filtering and prediction problems", J. Basic Eng.
 82:35-45, 1960. Plain matrices over the run axis (runs first, LAPACK), so that it shares no linear
-algebra with the filters it is compared with.
+algebra with the filters it is compared with (but for the diagnostics).
 """
 
 from __future__ import annotations
@@ -16,9 +16,9 @@ import numpy as np
 from flyoff.estimators.contract import Fault, Gaussian, Innovation, combine_faults
 from flyoff.estimators.gaussian_update import missing_components
 from flyoff.estimators.linearised import GaussianBelief, gaussian_start
-from flyoff.models.model import LOG_2PI, Model, Sensor
+from flyoff.models.model import Model, Sensor
 from flyoff.models.priors import Prior
-from flyoff.numerics import counts
+from flyoff.numerics import counts, linalg
 from flyoff.numerics.counts import Counts
 from flyoff.numerics.spaces import Array
 from flyoff.numerics.streams import Streams
@@ -70,10 +70,8 @@ class _KalmanFilter:
         r = np.broadcast_to(_runs_first(sensor.covariance(belief.mean, u, p)), (runs, m, m)).copy()
         y = _runs_first(z - predicted)
         missing = missing_components(z, runs)
-        count = np.full(runs, m)
         if missing is not None:
             gone = missing.T
-            count = m - gone.sum(axis=1)
             h = np.where(gone[:, :, None], 0, h)
             r = np.where(gone[:, :, None] | gone[:, None], 0, r)
             r[gone[:, :, None] & np.eye(m, dtype=bool)] = 1
@@ -86,11 +84,12 @@ class _KalmanFilter:
         delta = (gain @ y[..., None])[..., 0]
         a = np.eye(d, dtype=self.dtype) - gain @ h
         cov = a @ cov @ np.swapaxes(a, 1, 2) + gain @ r @ np.swapaxes(gain, 1, 2)
-        nis = (y * np.linalg.solve(s, y[..., None])[..., 0]).sum(axis=1)
-        like = -0.5 * (nis + np.log(np.linalg.det(s)) + LOG_2PI * count)
+        residual = np.ascontiguousarray(y.T)
+        low, _ = linalg.cholesky(_runs_last(s))
+        innovation = Innovation(residual, low, linalg.solve_lower(low, residual.copy()), missing)
         fault = combine_faults(belief.fault, ~healthy, Fault.NOT_POSITIVE_DEFINITE)
         after = replace(belief, fault=fault, mean=belief.mean + delta.T, cov=_runs_last(cov))
-        return after, Innovation(np.ascontiguousarray(y.T), nis, count, likelihood=like)
+        return after, innovation
 
     def posterior(self, belief: GaussianBelief) -> Gaussian:
         return Gaussian(belief.mean, belief.cov)

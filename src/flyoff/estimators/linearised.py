@@ -10,7 +10,7 @@ rotation errors: E. J. Lefferts, F. L. Markley, M. D. Shuster, J. Guid. Control 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any, Literal
 
 import numpy as np
@@ -100,19 +100,19 @@ class _LinearisedFilter:
         residual = sensor.space.local(predicted, z)
         if missing is not None:
             h = np.where(missing[:, None], self.dtype.type(0), h)
-        cross = linalg.product_t(cov, h)
-        s = linalg.product(h, cross)
-        s = 0.5 * (s + np.swapaxes(s, 0, 1)) + r
+        cross = sensor.project(cov, h)
+        s = sensor.spread(h, cross) + r
         c = correct(cross, s, residual, missing)
         # X = (I - K H) P, then X (I - K H)' + K R K' = X - (X H' - K R) K', as rank-m products
-        new = cov - linalg.product_t(c.gain, cross)
+        new = linalg.product_t(c.gain, cross)
+        np.subtract(cov, new, out=new)
         if self.choice.form == "joseph":
-            rest = linalg.product_t(new, h) - linalg.product(c.gain, r)
+            rest = sensor.project(new, h) - linalg.product(c.gain, r)
             new -= linalg.product_t(rest, c.gain)
         new = space.reset(linalg.symmetrise(new), c.delta)
         fault = combine_faults(belief.fault, ~c.ok, Fault.NOT_POSITIVE_DEFINITE)
-        after = replace(belief, fault=fault, mean=space.retract(x, c.delta), cov=new)
-        return after, c.innovation
+        mean = space.retract(x, c.delta)
+        return GaussianBelief(belief.step, fault, mean, new), c.innovation
 
     def posterior(self, belief: GaussianBelief) -> Gaussian:
         return Gaussian(belief.mean, belief.cov)

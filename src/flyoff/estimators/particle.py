@@ -162,13 +162,10 @@ class _ParticleFilter:
         noise = np.einsum("jm,ikjm->ikm", w, r) if r.ndim == 4 else r
         s = linalg.symmetrise(linalg.product_t(dz * w, dz)) + noise
         residual = sensor.space.local(predicted, z)
-        count = np.full(z.shape[1], sensor.m)
         if missing is not None:
             s, residual = mask_missing(s, residual, missing)
-            count = sensor.m - missing.sum(axis=0)
         low, _ = linalg.cholesky(s)
-        nis = linalg.lower_quadratic(low, residual)
-        return Innovation(residual, nis, count)
+        return Innovation(residual, low, linalg.solve_lower(low, residual.copy()), missing)
 
     def posterior(self, belief: _Cloud) -> Weighted:
         return Weighted(belief.points, belief.log_weights, belief.about, belief.parents)

@@ -8,7 +8,6 @@ identity covariance - and the polynomial degree the rule declares.
 from __future__ import annotations
 
 import itertools
-import math
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Protocol

@@ -124,11 +124,11 @@ class _SigmaPointFilter:
         predicted, dz = sensor.space.mean(seen, self.wm, about)
         weighted = dz * self.wc[:, None]
         p = model.parameters.astype(self.dtype, copy=False)
-        s = linalg.symmetrise(linalg.product_t(weighted, dz)) + sensor.covariance(belief.mean, u, p)
+        s = linalg.product_t(weighted, dz) + sensor.covariance(belief.mean, u, p)
         cross = linalg.product_t(dev, weighted)
         missing = missing_components(z, predicted.shape[1])
         c = correct(cross, s, sensor.space.local(predicted, z), missing)
-        cov = belief.cov - np.einsum("kim,kjm->ijm", c.half, c.half)
+        cov = belief.cov - linalg.einsum("kim,kjm->ijm", c.half, c.half)
         fault = combine_faults(fault, ~c.ok, Fault.NOT_POSITIVE_DEFINITE)
         after = replace(
             belief,

@@ -41,4 +41,5 @@ def paired_ratio(a: Array, b: Array) -> PairedRatio:
     # rounding is no evidence: filters that agree to ten digits are not separated
     if both.any() and np.abs(logs).max() < 1e-9:
         return PairedRatio(1.0, 1.0, 1.0, int(both.sum()))
-    return PairedRatio(*(math.exp(min(x, 700)) for x in (mean, low, high)), int(both.sum()))
+    ratio, low, high = (math.exp(min(x, 700)) for x in (mean, low, high))
+    return PairedRatio(ratio, low, high, int(both.sum()))

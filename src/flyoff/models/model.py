@@ -97,6 +97,16 @@ class Sensor:
     r_scale: float = 1.0
     memo: dict[Any, Array] = field(default_factory=dict, repr=False)
 
+    def project(self, cov: Array, h: Array) -> Array:
+        """P H' (d, m, M), over the columns that H touches."""
+        touched = self.h_pattern.columns
+        return linalg.product_t(cov[:, touched], h[:, touched])
+
+    def spread(self, h: Array, cross: Array) -> Array:
+        """H (P H') (m, m, M)."""
+        touched = self.h_pattern.columns
+        return linalg.product(h[:, touched], cross[touched])
+
     @property
     def m(self) -> int:
         """Number of measurement components (tangent)."""
@@ -220,7 +230,7 @@ class Model:
         return self.parameters.astype(like.dtype, copy=False)
 
     def _dt(self, like: Array, dt: float) -> Array:
-        return np.full((1, 1), dt, dtype=like.dtype)
+        return np.array([[dt]], dtype=like.dtype)
 
     def step(self, x: Array, u: Array, dt: float) -> Array:
         """Noise-free transition of points (n, ..., M); `u` is (k, M)."""
@@ -595,7 +605,7 @@ def _verify(spec: ModelSpec, model: Model) -> None:
         sensor = model.sensors[s.name]
         z, h = sensor.linearise(x, u, model.parameters)
         # a range or bearing has no value at zero norm: only the ordinary points count there
-        fine = np.isfinite(h).all(axis=(0, 1))
+        fine: Array = np.isfinite(h).all(axis=(0, 1))
         fine[:-2] = True
         _compare(s.measure, s.space, z[:, fine], *(_cut(v, fine) for v in names[:2]), p)
 

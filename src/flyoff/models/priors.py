@@ -21,7 +21,10 @@ __all__ = ["BoxPrior", "GaussianPrior", "MixturePrior", "Prior"]
 class Prior(Protocol):
     """The contract; every array is component first, runs last."""
 
-    space: StateSpace
+    @property
+    def space(self) -> StateSpace:
+        """The space it lives in."""
+        ...
 
     def moments(self) -> tuple[Array, Array]:
         """Mean (n, M) and tangent covariance (d, d, M)."""

@@ -38,12 +38,28 @@ def _select(cond: Scalar, a: Scalar, b: Scalar) -> Scalar:
     return np.where(cond, a, b)
 
 
+def _guarded(near: Scalar, x: Scalar) -> Scalar:
+    """`x`, or one where the series is used instead.
+
+    Symbols need no guard: the tape selects, and what the other branch holds never leaves it.
+    """
+    return _select(near, 1.0, x) if isinstance(x, np.ndarray | float | int) else x
+
+
+def _series(s: Scalar, *coefficients: float) -> Scalar:
+    """Polynomial in s, lowest power first, by Horner's rule."""
+    total: Scalar = coefficients[-1]
+    for c in reversed(coefficients[:-1]):
+        total = total * s + c
+    return total
+
+
 def sinc(x: Scalar) -> Scalar:
     """sin(x)/x, exact to rounding at and near zero."""
     s = x * x
     near = s < _SMALL**2
-    far_x = _select(near, 1.0, x)
-    series = 1 - s / 6 * (1 - s / 20 * (1 - s / 42 * (1 - s / 72)))
+    far_x = _guarded(near, x)
+    series = _series(s, 1, -1 / 6, 1 / 120, -1 / 5040, 1 / 362880)
     return _select(near, series, np.sin(x) / far_x)
 
 
@@ -51,8 +67,8 @@ def cosc(x: Scalar) -> Scalar:
     """(1 - cos x)/x, exact to rounding at and near zero."""
     s = x * x
     near = s < _SMALL**2
-    far_x = _select(near, 1.0, x)
-    series = x / 2 * (1 - s / 12 * (1 - s / 30 * (1 - s / 56 * (1 - s / 90))))
+    far_x = _guarded(near, x)
+    series = x * _series(s, 1 / 2, -1 / 24, 1 / 720, -1 / 40320, 1 / 3628800)
     return _select(near, series, (1 - np.cos(x)) / far_x)
 
 
@@ -106,10 +122,10 @@ def quat_exp(v: Vec) -> Vec:
     """Unit quaternion of the rotation vector `v` [rad]."""
     s = dot(v, v)
     near = s < _SMALL**2
-    angle = np.sqrt(_select(near, 1.0, s))
+    angle = np.sqrt(_guarded(near, s))
     # cos(t/2) and sin(t/2)/t as series in s = t^2
-    c_near = 1 - s / 8 * (1 - s / 48 * (1 - s / 120 * (1 - s / 224)))
-    k_near = 0.5 * (1 - s / 24 * (1 - s / 80 * (1 - s / 168 * (1 - s / 288))))
+    c_near = _series(s, 1, -1 / 8, 1 / 384, -1 / 46080, 1 / 10321920)
+    k_near = _series(s, 1 / 2, -1 / 48, 1 / 3840, -1 / 645120, 1 / 185794560)
     c = _select(near, c_near, np.cos(angle / 2))
     k = _select(near, k_near, np.sin(angle / 2) / angle)
     return (c, k * v[0], k * v[1], k * v[2])
@@ -120,11 +136,9 @@ def quat_log(q: Vec) -> Vec:
     w = abs(q[0])
     s = dot(q[1:], q[1:])
     near = s < _SMALL**2 / 4
-    n = np.sqrt(_select(near, 1.0, s))
+    n = np.sqrt(_guarded(near, s))
     # 2 asin(n)/n as a series: well conditioned at n = 0, where atan2(n, w)/n is 0/0
-    k_near = 2 * (
-        1 + s * (1 / 6 + s * (3 / 40 + s * (15 / 336 + s * (105 / 3456 + s * (945 / 42240)))))
-    )
+    k_near = _series(s, 2, 1 / 3, 3 / 20, 15 / 168, 105 / 1728, 945 / 21120)
     k = _select(near, k_near, 2 * np.arctan2(n, w) / n)
     k = _select(q[0] < 0, -k, k)
     return (k * q[1], k * q[2], k * q[3])

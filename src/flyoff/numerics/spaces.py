@@ -120,7 +120,7 @@ class StateSpace:
         return out
 
     # -- symbols -------------------------------------------------------------------------------
-    def unpack(self, scalars: Sequence[Any]) -> SimpleNamespace:
+    def unpack(self, scalars: Sequence[Any] | Array) -> SimpleNamespace:
         """Blocks by name: a tuple of scalars, or the bare scalar of a one-component block."""
         out = {}
         for b in self.blocks:
@@ -159,12 +159,17 @@ class StateSpace:
         """Move from `x` (n, ..., M) by the tangent vector `delta` (d, ..., M), broadcasting."""
         if self.flat:
             return x + delta
+        if not self._rotations:
+            out = x + delta
+            for a, _ in self._angles:
+                out[a] = _wrap(out[a])
+            return out
         shape = np.broadcast_shapes(x.shape[1:], delta.shape[1:])
         out = np.empty((self.n, *shape), dtype=np.result_type(x, delta))
         for a, t in self._vectors:
             np.add(x[a], delta[t], out=out[a])
         for a, t in self._angles:
-            out[a] = algebra.wrap(x[a] + delta[t])
+            out[a] = _wrap(x[a] + delta[t])
         for a, t in self._rotations:
             q = algebra.quat_mul(tuple(x[a]), algebra.quat_exp(tuple(delta[t])))
             # one Newton step to unit length: rounding must not add up over a long flight
@@ -174,15 +179,20 @@ class StateSpace:
         return out
 
     def local(self, x: Array, y: Array) -> Array:
-        """Tangent vector (d, ..., M) at `x` that leads to `y`; angles and rotations shortest way."""
+        """Tangent vector (d, ..., M) at `x` that leads to `y`, angles the shortest way."""
         if self.flat:
             return y - x
+        if not self._rotations:
+            out = y - x
+            for _, t in self._angles:
+                out[t] = _wrap(out[t])
+            return out
         shape = np.broadcast_shapes(x.shape[1:], y.shape[1:])
         out = np.empty((self.d, *shape), dtype=np.result_type(x, y))
         for a, t in self._vectors:
             np.subtract(y[a], x[a], out=out[t])
         for a, t in self._angles:
-            out[t] = algebra.wrap(y[a] - x[a])
+            out[t] = _wrap(y[a] - x[a])
         for a, t in self._rotations:
             v = algebra.quat_log(algebra.quat_mul(algebra.quat_conj(tuple(x[a])), tuple(y[a])))
             for k in range(3):
@@ -237,6 +247,13 @@ class StateSpace:
         for name in names:
             out.extend(range(*self.tangent[name].indices(self.d)))
         return out
+
+
+def _wrap(a: Array) -> Array:
+    """Angle wrapped to [-pi, pi], as `algebra.wrap` with one operation less."""
+    turns = np.rint(a * (0.5 / np.pi))
+    turns *= 2 * np.pi
+    return np.subtract(a, turns, out=turns)
 
 
 def right_jacobian(v: Array) -> Array:

@@ -2,11 +2,11 @@
 
 Six error states: rotation (body frame) and gyro bias. The gyro is an input at 50 Hz; accelerometer
 and magnetometer are sensors at their own rates. The truth is a 20 s flight with real manoeuvres:
-attitude is flown, and velocity follows from thrust, gravity and linear rotor drag (P. Martin, E.
-Salaun, "The true role of accelerometer feedback in quadrotor control", Proc. ICRA 2010, eq. 11-13)
-at constant height. The accelerometer therefore senses thrust and drag, not tilt; the filters believe
-that it senses gravity. Invented vehicle, data-sheet values typical of the class (common practice,
-no source).
+attitude is flown, and velocity follows from thrust, gravity and linear rotor drag at constant
+height (P. Martin, E. Salaun, "The true role of accelerometer feedback in quadrotor control", Proc.
+ICRA 2010, from memory). The accelerometer therefore senses thrust and drag, not tilt; the filters
+believe that it senses gravity. Invented vehicle, data-sheet values typical of the class (common
+practice, no source).
 """
 
 from __future__ import annotations

@@ -107,16 +107,18 @@ class CoordinatedTurn(SimulatedProblem):
 def _model(q1: float, q2: float, sr: float, st: float, rate: float, latency: float) -> Model:
     def turn(x, u, w, p, dt):  # type: ignore[no-untyped-def]
         (px, py), (vx, vy), rate = x.position, x.velocity, x.turn_rate
-        # sin(wT)/w and (1 - cos wT)/w from half the angle: exact at zero rate, one branch
-        half = rate * dt / 2
-        k, sin, cos = algebra.sinc(half), np.sin(half), np.cos(half)
-        s, c = dt * k * cos, dt * k * sin
-        sin_full, cos_full = 2 * sin * cos, 1 - 2 * sin * sin
+        # sin(wT)/w, (1 - cos wT)/w, sin(wT) and cos(wT) from half the angle: one branch, and exact
+        # at zero rate
+        half = rate * (dt / 2)
+        chord = dt * algebra.sinc(half)
+        s = chord * np.cos(half)
+        c = rate * (chord * chord * 0.5)
+        sin, cos = rate * s, 1 - rate * c
         return (
             (px + s * vx - c * vy + w.position[0], py + c * vx + s * vy + w.position[1]),
             (
-                cos_full * vx - sin_full * vy + w.velocity[0],
-                sin_full * vx + cos_full * vy + w.velocity[1],
+                cos * vx - sin * vy + w.velocity[0],
+                sin * vx + cos * vy + w.velocity[1],
             ),
             rate + w.turn_rate,
         )

@@ -33,7 +33,9 @@ _LINES = ("-", "--", "-.", ":", (0, (5, 1)), (0, (3, 1, 1, 1, 1, 1)))
 _INK = "#222222"
 
 
-def write_figures(study: Study, folder: Path, advance: Callable[[], None] | None = None) -> list[Path]:
+def write_figures(
+    study: Study, folder: Path, advance: Callable[[], None] | None = None
+) -> list[Path]:
     """Three figures a condition: errors with +-3 sigma, NEES over time, accuracy against cost.
 
     Returns the files, named ``<what>-<condition>.png``.
@@ -124,19 +126,19 @@ def _errors(study: Study, cells: list[CellData]) -> Figure:
                 limit = max(limit, float(np.quantile(seen, 0.99)))
         for column, name in enumerate(used):
             ax = axes[row, column]
-            c = by_name.get(name)
-            if c is None:
+            shown = by_name.get(name)
+            if shown is None:
                 ax.axis("off")
                 if row == 0:
                     ax.set_title(name)
                 continue
-            t = problem.problem.step * np.arange(1, len(c.traces["sigma"]) + 1)
-            sigma = 3 * c.traces["sigma"][:, index] * factor
+            t = problem.problem.step * np.arange(1, len(shown.traces["sigma"]) + 1)
+            sigma = 3 * shown.traces["sigma"][:, index] * factor
             look = _line(study, name)
             ax.fill_between(t, -sigma, sigma, color=look["color"], alpha=0.16, linewidth=0)
             ax.plot(t, sigma, color=look["color"], linewidth=0.7)
             ax.plot(t, -sigma, color=look["color"], linewidth=0.7)
-            ax.plot(t, c.traces["error"][:, index] * factor, color=_INK, linewidth=0.8)
+            ax.plot(t, shown.traces["error"][:, index] * factor, color=_INK, linewidth=0.8)
             if limit > 0:
                 ax.set_ylim(-1.15 * limit, 1.15 * limit)
             ax.set_xlim(0, t[-1])
@@ -166,6 +168,17 @@ def _grid(count: int, legend: bool = True) -> tuple[Figure, list[Any]]:
     for ax in flat[count:]:
         ax.axis("off")
     return figure, flat[:count]
+
+
+def _plain_ticks(axis: Any) -> None:
+    """Numbers without powers of ten on a logarithmic axis, minor ones where they have room."""
+    low, high = sorted(axis.get_view_interval())
+    plain = mpl.ticker.FuncFormatter(lambda v, _: f"{v:g}")
+    axis.set_major_formatter(plain)
+    wide = high / max(low, 1e-300) > 30
+    axis.set_minor_formatter(mpl.ticker.NullFormatter() if wide else plain)
+    if not wide:
+        axis.set_minor_locator(mpl.ticker.LogLocator(subs=(2, 5)))
 
 
 def _legend(figure: Figure, axes: list[Any]) -> None:
@@ -206,7 +219,7 @@ def _nees(study: Study, cells: list[CellData]) -> Figure:
             ax.axhline(edge, color="#777777", linewidth=0.7, linestyle=(0, (1, 2)))
         ax.set_yscale("log")
         ax.set_ylim(0.3, max(3.0, 1.3 * top))
-        ax.yaxis.set_major_formatter(mpl.ticker.FuncFormatter(lambda v, _: f"{v:g}"))
+        _plain_ticks(ax.yaxis)
         ax.set_title(title)
         ax.set_xlabel("time [s]")
         ax.set_ylabel("NEES / d, mean over runs")
@@ -243,9 +256,9 @@ def _accuracy_cost(study: Study, cells: list[CellData]) -> Figure:
         for c in own:
             name = c.cell.estimator.name
             mine = here[here.estimator == name]
-            error = mine[
-                (mine.quantity == q.name) & (mine.statistic == statistic)
-            ].set_index("window")
+            error = mine[(mine.quantity == q.name) & (mine.statistic == statistic)].set_index(
+                "window"
+            )
             cost = mine[(mine.quantity == "step") & (mine.statistic == "time")]
             if cost.empty or window not in error.index:
                 continue
@@ -264,8 +277,9 @@ def _accuracy_cost(study: Study, cells: list[CellData]) -> Figure:
                 markeredgewidth=0.6, ecolor=look["color"], **look,
             )  # fmt: skip
         ax.set_xscale("log")
-        ax.xaxis.set_major_formatter(mpl.ticker.FuncFormatter(lambda v, _: f"{v:g}"))
         ax.margins(x=0.18, y=0.2)
+        ax.autoscale_view()
+        _plain_ticks(ax.xaxis)
         what = "rms, range of segments" if recorded else f"typical rms, `{window}`"
         ax.set_title(problem.name)
         ax.set_xlabel("time a run and step [us], amortised over a batch")

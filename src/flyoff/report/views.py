@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import pandas as pd
 
@@ -95,11 +96,11 @@ class _Index:
         keys = zip(part.estimator, part.window, part.quantity, part.statistic, strict=True)
         self.rows = dict(zip(keys, part.itertuples(index=False), strict=True))
 
-    def value(self, *key: str) -> float:
+    def value(self, *key: Any) -> float:
         row = self.rows.get(key)
         return math.nan if row is None else float(row.value)
 
-    def interval(self, *key: str) -> str:
+    def interval(self, *key: Any) -> str:
         row = self.rows.get(key)
         if row is None or math.isnan(row.value):
             return "-"
@@ -116,17 +117,13 @@ class _Index:
         return f"{number(value)} {{{number(min(parts))} .. {number(max(parts))}}}"
 
 
-def _accuracy(
-    title: str, problem: ProblemEntry, cells: Sequence[CellData], index: _Index
-) -> View:
+def _accuracy(title: str, problem: ProblemEntry, cells: Sequence[CellData], index: _Index) -> View:
     quantities: tuple[Quantity, ...] = problem.problem.quantities
     names = [c.cell.estimator.name for c in cells]
     windows = [w for w, _, _ in problem.windows]
     if problem.problem.recorded:
         heads = ["estimator", *(_head(q, "rms error") for q in quantities)]
-        rows = [
-            [n, *(index.spread(n, windows, q.name, "rmse") for q in quantities)] for n in names
-        ]
+        rows = [[n, *(index.spread(n, windows, q.name, "rmse") for q in quantities)] for n in names]
         notes = [LEGEND_RECORDED]
         if any(q.agreement for q in quantities):
             agreeing = ", ".join(q.name for q in quantities if q.agreement)
@@ -156,13 +153,13 @@ def _head(q: Quantity, what: str) -> str:
 def _marks(cells: Sequence[CellData], window: str, quantity: str) -> dict[str, str]:
     """Best by typical error, and what the paired interval does not separate from it."""
     errors = {c.cell.estimator.name: c.per_run[f"{window}/{quantity}/rms"] for c in cells}
-    typical = {
-        name: float(pd.Series(e[e > 0]).map(math.log).mean()) for name, e in errors.items()
-    }
+    typical = {name: float(pd.Series(e[e > 0]).map(math.log).mean()) for name, e in errors.items()}
     ranked = [n for n in typical if not math.isnan(typical[n])]
     if len(ranked) < 2:
         return {}
-    best = min(ranked, key=lambda n: typical[n])
+    # rounding decides nothing: of equals the first in the file is the best
+    least = min(typical[n] for n in ranked)
+    best = next(n for n in ranked if typical[n] - least < 1e-9)
     out = {best: "*"}
     for n in ranked:
         if n != best and not paired_ratio(errors[n], errors[best]).separated:

@@ -1,7 +1,7 @@
 """Consistency: does the filter's covariance describe its errors?
 
-NEES e' P^-1 e, jointly and by block, divided by the number of components; NIS of each sensor, with S
-from the prior covariance; containment within 1, 2 and 3 standard deviations. Y. Bar-Shalom,
+NEES e' P^-1 e, jointly and by block, divided by the number of components; NIS of each sensor, with
+S from the prior covariance; containment within 1, 2 and 3 standard deviations. Y. Bar-Shalom,
 X. R. Li, T. Kirubarajan 2001, section 5.4.
 """
 
@@ -38,7 +38,7 @@ class ConsistencyTrack:
         space, truth = context.model.space, context.recording.truth
         shape = (context.steps, context.runs)
         # components without a truth counterpart are not assessed
-        known = np.isfinite(truth).any(axis=(0, 2))
+        known: Array = np.isfinite(truth).any(axis=(0, 2))
         has_truth = [known[space.ambient[b.name]].all() for b in space.blocks]
         names = [b.name for b, has in zip(space.blocks, has_truth, strict=True) if has]
         self.blocks = {"": space.indices(names)}
@@ -79,7 +79,7 @@ class ConsistencyTrack:
         if self.context.truth_covariance is not None:
             cov = cov + self.context.truth_covariance[:, :, None]
         z = np.abs(e) / np.sqrt(np.einsum("iim->im", cov))
-        inside = z <= np.array([1, 2, 3])[:, None, None]
+        inside: Array = z <= np.array([1, 2, 3])[:, None, None]
         for name, index in self.blocks.items():
             if name == "" and self.exact:
                 low = step.factor

@@ -7,7 +7,7 @@
 3. ``per_run()`` returns arrays over runs, (M,) or (M, bins), by a key ``window/quantity/what``.
 4. ``profiles()`` returns arrays (T, M) by name; the store keeps their sums over runs. ``traces()``
    returns arrays of the batch's first run, of which the store keeps that of run 0.
-5. ``statistics(context)`` says, as data, which table rows follow from which keys by which reduction;
+5. ``statistics(...)`` says, as data, which table rows follow from which keys by which reduction;
    the reductions live in `flyoff.evidence`. A score never looks at other runs.
 
 A failed run gives NaN; reductions count it, they never drop it silently.

@@ -29,6 +29,10 @@ Seconds = Annotated[Positive, Unit("s")]
 Only = list[Name]
 
 
+def _nominal() -> dict[str, dict[str, Any]]:
+    return {"nominal": {}}
+
+
 class _Section(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
@@ -69,7 +73,7 @@ class ExperimentFile(_Section):
     divergence: DivergenceSpec = DivergenceSpec()
     filtering: FilteringSpec = FilteringSpec()
     problems: dict[Name, ProblemSpec] = Field(min_length=1)
-    conditions: dict[Name, dict[str, Any]] = Field(default_factory=lambda: {"nominal": {}})
+    conditions: dict[Name, dict[str, Any]] = Field(default_factory=_nominal)
     estimators: dict[Name, dict[str, Any]] = Field(min_length=1)
 
 
@@ -159,7 +163,9 @@ class _Check:
     def error(self, path: Path_, text: str) -> None:
         line = self.tree.line(path)
         field = ".".join(map(str, path))
-        self.errors.setdefault(f"{self.tree.file}:{line}: {field + ': ' if field else ''}{text}", line)
+        self.errors.setdefault(
+            f"{self.tree.file}:{line}: {field + ': ' if field else ''}{text}", line
+        )
 
     def stop(self) -> None:
         if self.errors:
@@ -200,13 +206,17 @@ class _Check:
         elif kind == "union_tag_invalid":
             tags = re.findall(r"'([^']+)'", str(ctx.get("expected_tags", "")))
             tag = ctx.get("discriminator", "").strip("'")
-            self.error((*at, tag), f"unknown {tag} `{ctx.get('tag')}`{nearest(ctx.get('tag', ''), tags)}")
+            self.error(
+                (*at, tag), f"unknown {tag} `{ctx.get('tag')}`{nearest(ctx.get('tag', ''), tags)}"
+            )
         elif kind == "union_tag_not_found":
             self.error(at, f"needs {ctx.get('discriminator')}, the name of a rule")
         elif kind == "literal_error":
             names = re.findall(r"'([^']*)'", str(ctx.get("expected", ""))) or [str(ctx["expected"])]
             hint = nearest(str(got), names) if isinstance(got, str) else ""
-            self.error(at, f"must be {_choice(names)}, got {_show(got)}{hint if 'mean' in hint else ''}")
+            self.error(
+                at, f"must be {_choice(names)}, got {_show(got)}{hint if 'mean' in hint else ''}"
+            )
         else:
             self.error(at, f"{_rule(kind, ctx, e['msg'])}, got {_show(got)}")
         del node
@@ -488,7 +498,9 @@ def _estimators(check: _Check, raw: dict[str, Any], problems: Any) -> tuple[Entr
             check.error((*path, "family"), f"is required{nearest('', families)}")
             continue
         if not isinstance(family, str) or family not in families:
-            check.error((*path, "family"), f"unknown family `{family}`{nearest(str(family), families)}")
+            check.error(
+                (*path, "family"), f"unknown family `{family}`{nearest(str(family), families)}"
+            )
             continue
         options = {k: v for k, v in entry.items() if k not in ("family", "only")}
         chosen = check.model(families[family], options, path)
@@ -513,7 +525,5 @@ def _suits(check: _Check, problems: dict[str, ProblemEntry], estimators: Iterabl
             if why is not None:
                 check.error(
                     ("estimators", estimator.name),
-                    f"cannot run on `{entry.name}`: {why}; name the problems it is for under `only`",
+                    f"cannot run on `{entry.name}`: {why}; name its problems under `only`",
                 )
-
-

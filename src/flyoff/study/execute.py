@@ -1,4 +1,4 @@
-"""Execution of a plan: local processes, one thread of linear algebra each, blocks as they finish."""
+"""Execution of a plan: local processes, one thread of linear algebra each."""
 
 from __future__ import annotations
 

@@ -193,7 +193,9 @@ def estimate(experiment: Experiment, probe_steps: int = 12) -> list[CellEstimate
         streams = Streams(experiment.seed, "timing", p.name, range(max(2, runs)))
         model, recording = make_recording(p, Entry("", ()), streams)
         recording = recording.stretch(recording.steps // 2, probe_steps)
-        truth = 8e-6 * np.prod(recording.truth.shape[1:]) * round(p.problem.duration / p.problem.step)
+        truth = (
+            8e-6 * np.prod(recording.truth.shape[1:]) * round(p.problem.duration / p.problem.step)
+        )
         for cell in cells(experiment):
             if cell.problem is not p:
                 continue
@@ -205,9 +207,7 @@ def estimate(experiment: Experiment, probe_steps: int = 12) -> list[CellEstimate
     return out
 
 
-def _probe(
-    cell: Cell, model: Model, recording: Recording, streams: Streams
-) -> tuple[float, int]:
+def _probe(cell: Cell, model: Model, recording: Recording, streams: Streams) -> tuple[float, int]:
     batch = max(2, min(cell.estimator.what.batch(model), len(recording.runs)))
     part = slice(0, batch)
     few, own = recording.select(part), streams.select(part)

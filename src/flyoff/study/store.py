@@ -70,7 +70,10 @@ def source_digest() -> str:
 @cache
 def environment() -> dict[str, str]:
     """What decides bits besides the source: versions, architecture, processor features."""
-    features = np._core._multiarray_umath.__cpu_features__  # type: ignore[attr-defined]
+    try:  # no public name for it
+        from numpy._core._multiarray_umath import __cpu_features__ as features
+    except ImportError:
+        features = {}
     on = "+".join(sorted(name for name, has in features.items() if has))
     return {
         "python": platform.python_version(),

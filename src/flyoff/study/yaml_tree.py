@@ -128,6 +128,7 @@ def _build(
         return [
             _build(name, item, (*path, i), lines, problems) for i, item in enumerate(node.value)
         ]
+    assert isinstance(node, yaml.ScalarNode)
     return _scalar(node)
 
 

@@ -4,7 +4,8 @@ One walk of 20 m out and back, both feet. State: position, velocity and attitude
 gyro bias; specific force and rate are inputs; the only measurement is zero velocity in detected
 stance (E. Foxlin, IEEE Comput. Graph. Appl. 25(6):38-46, 2005). The detector (I. Skog et al., IEEE
 Trans. Biomed. Eng. 57(11):2657-2666, 2010), its threshold, the lever arm and the sensor's rotation
-were fitted on the first 8 s, which are not scored. See `foot_walk_data` and `foot_walk/PROVENANCE.md`.
+were fitted on the first 8 s, which are not scored. See `foot_walk_data` and
+`foot_walk/PROVENANCE.md`.
 """
 
 from __future__ import annotations
@@ -179,7 +180,7 @@ class FootInertial:
 
 
 class WholeTrackAlignment:
-    """One rotation about the vertical and one shift a run, by least squares, for every candidate."""
+    """One rotation about the vertical and one shift a run, by least squares."""
 
     rule = (
         "one rotation about the vertical and one shift a run, least squares of the horizontal "
@@ -234,9 +235,9 @@ class _Increments:
 def _increments() -> _Increments:
     """Pairs of samples integrated with coning and sculling terms, as mean force and rate.
 
-    Two-sample algorithm: R. B. Miller, J. Guid. Control Dyn. 6(4):287-291, 1983 (coning); P. Savage,
-    J. Guid. Control Dyn. 21(2):208-221, 1998 (sculling), both from memory. The force is referred to
-    the attitude at the middle of the pair, where the model rotates it.
+    Two-sample algorithm: R. B. Miller, J. Guid. Control Dyn. 6(4):287-291, 1983 (coning);
+    P. Savage, J. Guid. Control Dyn. 21(2):208-221, 1998 (sculling), both from memory. The force is
+    referred to the attitude at the middle of the pair, where the model rotates it.
     """
     walk = foot_walk_data.prepare()
     rows = np.arange(0, len(walk.times), 2)
