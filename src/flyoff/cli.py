@@ -12,8 +12,8 @@ import flyoff
 from flyoff.errors import UserError
 
 if TYPE_CHECKING:
-    from flyoff.api import Study
     from flyoff.study.config import Experiment
+    from flyoff.study.run import Study
 
 __all__ = ["app", "main"]
 
@@ -122,9 +122,7 @@ def _run_with_progress(experiment: Experiment, out: Path | None, jobs: int | Non
                 tasks[what] = progress.add_task(labels[what], total=total)
             progress.update(tasks[what], completed=done, total=total)
 
-        study = api.run(experiment, out=out, jobs=jobs, progress=advance)
-        api.write_report(study, progress=advance)
-    return study
+        return api.run(experiment, out=out, jobs=jobs, progress=advance)
 
 
 def _print_study(study: Study) -> None:

@@ -129,7 +129,7 @@ def run_filter(
             posterior = bound.posterior(belief)
             mean, cov, ess = moments(model.space, posterior)
             low, sound = (None, None) if cov is None else linalg.cholesky(cov)
-            lost: Array = ~np.isfinite(mean).all(axis=0)
+            lost = ~np.all(np.isfinite(mean), axis=0)
             new = combine_faults(belief.fault, lost, Fault.NON_FINITE)
             if sound is not None and isinstance(posterior, Gaussian):
                 new = combine_faults(new, ~sound, Fault.NOT_POSITIVE_DEFINITE)

@@ -605,7 +605,7 @@ def _verify(spec: ModelSpec, model: Model) -> None:
         sensor = model.sensors[s.name]
         z, h = sensor.linearise(x, u, model.parameters)
         # a range or bearing has no value at zero norm: only the ordinary points count there
-        fine: Array = np.isfinite(h).all(axis=(0, 1))
+        fine: Array = np.all(np.isfinite(h), axis=(0, 1))
         fine[:-2] = True
         _compare(s.measure, s.space, z[:, fine], *(_cut(v, fine) for v in names[:2]), p)
 

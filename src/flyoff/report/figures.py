@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
@@ -15,9 +15,9 @@ import matplotlib.pyplot as plt
 import seaborn as sns
 from matplotlib.figure import Figure
 
-from flyoff.api import Study
 from flyoff.evidence.intervals import nees_band
 from flyoff.study.config import ProblemEntry
+from flyoff.study.run import Study
 from flyoff.study.table import WHOLE, CellData
 
 __all__ = ["write_figures"]
@@ -33,12 +33,10 @@ _LINES = ("-", "--", "-.", ":", (0, (5, 1)), (0, (3, 1, 1, 1, 1, 1)))
 _INK = "#222222"
 
 
-def write_figures(
-    study: Study, folder: Path, advance: Callable[[], None] | None = None
-) -> list[Path]:
+def write_figures(study: Study, folder: Path) -> Iterator[Path]:
     """Three figures a condition: errors with +-3 sigma, NEES over time, accuracy against cost.
 
-    Returns the files, named ``<what>-<condition>.png``.
+    Yields each file, named ``<what>-<condition>.png``, when it is written.
     """
     folder.mkdir(parents=True, exist_ok=True)
     style = {
@@ -47,7 +45,6 @@ def write_figures(
         "axes.labelcolor": _INK, "xtick.color": _INK, "ytick.color": _INK,
         "grid.color": "#e3e3e3", "grid.linewidth": 0.6, "savefig.dpi": 130,
     }  # fmt: skip
-    out = []
     with sns.axes_style("whitegrid"), mpl.rc_context(style):
         for condition in study.experiment.conditions:
             cells = [c for c in study.cells if c.cell.condition is condition]
@@ -62,10 +59,7 @@ def write_figures(
                 file = folder / f"{name}-{condition.name}.png"
                 figure.savefig(file, metadata={"Software": "flyoff"})
                 plt.close(figure)
-                out.append(file)
-                if advance is not None:
-                    advance()
-    return out
+                yield file
 
 
 def _look(study: Study, name: str) -> dict[str, Any]:

@@ -13,10 +13,10 @@ from typing import Any
 
 import pandas as pd
 
-from flyoff.api import Study
 from flyoff.evidence.paired import paired_ratio
 from flyoff.problems.contract import Quantity
 from flyoff.study.config import ProblemEntry
+from flyoff.study.run import Study
 from flyoff.study.table import WHOLE, CellData
 
 __all__ = ["CAUTIONS", "LEGEND", "View", "markdown", "views"]

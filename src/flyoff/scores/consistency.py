@@ -38,7 +38,7 @@ class ConsistencyTrack:
         space, truth = context.model.space, context.recording.truth
         shape = (context.steps, context.runs)
         # components without a truth counterpart are not assessed
-        known: Array = np.isfinite(truth).any(axis=(0, 2))
+        known: Array = np.any(np.isfinite(truth), axis=(0, 2))
         has_truth = [known[space.ambient[b.name]].all() for b in space.blocks]
         names = [b.name for b, has in zip(space.blocks, has_truth, strict=True) if has]
         self.blocks = {"": space.indices(names)}
