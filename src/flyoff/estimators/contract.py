@@ -203,7 +203,8 @@ def moments(space: StateSpace, posterior: Posterior) -> tuple[Array, Array | Non
     lw = posterior.log_weights
     w = np.exp(lw - lw.max(axis=0))
     w /= w.sum(axis=0)
-    mean, dev = space.mean(posterior.points, w, posterior.about)
+    # the reference is one of the points, not their centre
+    mean, dev = space.mean(posterior.points, w, posterior.about, passes=3)
     square = np.einsum("jm,jm->m", w, w)
     with np.errstate(divide="ignore", invalid="ignore"):
         cov = np.einsum("ijm,kjm->ikm", dev * w, dev) / (1 - square)

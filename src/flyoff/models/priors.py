@@ -141,7 +141,7 @@ class MixturePrior:
         w = self._weights()
         runs = w.shape[1]
         heaviest = self.means[:, np.argmax(w, axis=0), np.arange(runs)]
-        mean, dev = self.space.mean(self.means, w, heaviest)
+        mean, dev = self.space.mean(self.means, w, heaviest, passes=3)
         cov = np.einsum("km,ijkm->ijm", w, self.covs)
         cov = cov + np.einsum("km,ikm,jkm->ijm", w, dev, dev)
         return mean, cov

@@ -69,9 +69,6 @@ class StateSpace:
         Where each block lies.
     """
 
-    # A fixed number of passes keeps the result independent of how runs are batched.
-    _MEAN_PASSES = 2
-
     def __init__(self, *blocks: Block) -> None:
         self.blocks = blocks
         self.ambient: dict[str, slice] = {}
@@ -199,8 +196,14 @@ class StateSpace:
                 out[t.start + k] = v[k]
         return out
 
-    def mean(self, points: Array, weights: Array, about: Array) -> tuple[Array, Array]:
+    def mean(
+        self, points: Array, weights: Array, about: Array, passes: int = 1
+    ) -> tuple[Array, Array]:
         """Weighted mean on the manifold, taken in the tangent space of a reference point.
+
+        One pass is exact for vectors and angles. On rotations its error is of fourth order in the
+        spread where the reference is the image of the centre; a reference far from the mean wants
+        more passes. Their number is fixed, so that bits do not depend on how runs are batched.
 
         Parameters
         ----------
@@ -215,7 +218,7 @@ class StateSpace:
         """
         spec = "j,djm->dm" if weights.ndim == 1 else "jm,djm->dm"
         mean = about
-        for _ in range(self._MEAN_PASSES if self.has_rotation else 1):
+        for _ in range(passes if self.has_rotation else 1):
             dev = self.local(mean[:, None], points)
             step = np.einsum(spec, weights, dev)
             mean = self.retract(mean, step)

@@ -40,7 +40,7 @@ class _Section(BaseModel):
 class DivergenceSpec(_Section):
     """When a run counts as lost."""
 
-    error: dict[str, str] = Field(default_factory=dict)
+    error: dict[str, Any] = Field(default_factory=dict)
     hold: Seconds = 1.0
     converge_by: Annotated[float, Unit("s"), Field(ge=0)] = 0.0
 
@@ -178,16 +178,13 @@ class _Check:
             return TypeAdapter(cls).validate_python(data, context={"from_file": True})
         except ValidationError as why:
             for e in why.errors(include_url=False):
-                self._translate(cls, e, path, renamed, data)
+                self._translate(cls, e, path, renamed)
         except UserError as why:
             self.error(path, str(why))
         return None
 
-    def _translate(
-        self, cls: Any, e: Any, path: Path_, renamed: Mapping[str, str], data: Any
-    ) -> None:
+    def _translate(self, cls: Any, e: Any, path: Path_, renamed: Mapping[str, str]) -> None:
         at: Path_ = path
-        node = data
         for step in e["loc"]:
             step = renamed.get(step, step) if at == path else step
             known = (*at, step) in self.tree.lines
@@ -218,8 +215,10 @@ class _Check:
                 at, f"must be {_choice(names)}, got {_show(got)}{hint if 'mean' in hint else ''}"
             )
         else:
+            # what the file says, not what it was converted to
+            written = self.tree.at(at)
+            got = got if isinstance(written, dict | list) else written
             self.error(at, f"{_rule(kind, ctx, e['msg'])}, got {_show(got)}")
-        del node
 
 
 def _rule(kind: str, ctx: Mapping[str, Any], message: str) -> str:
@@ -419,6 +418,9 @@ def _divergence(
                 )
             continue
         unit = quantities[name].unit
+        if not isinstance(text, str):
+            check.error((*path, "error", name), f"needs a unit, as in `{text} {unit}`, got {text}")
+            continue
         try:
             bound = convert(text, unit)
         except ValueError as why:

@@ -41,6 +41,16 @@ class Tree:
             path = path[:-1]
         return self.lines.get(path, 1)
 
+    def at(self, path: Path_) -> Any:
+        """What stands at a path; None where nothing does."""
+        node = self.data
+        for step in path:
+            try:
+                node = node[step]
+            except (KeyError, IndexError, TypeError):
+                return None
+        return node
+
 
 def read_yaml(path: Path) -> Tree:
     """Read a file.
