@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import os
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-from flyoff.report.figures import write_figures
-from flyoff.report.views import markdown
-from flyoff.study.config import Experiment, load_experiment
-from flyoff.study.run import Progress, Study, carry_out, select, write_atomically
+from flyoff.study.config import Experiment, load_experiment, select
 
-__all__ = ["Study", "load", "run", "select"]
+if TYPE_CHECKING:
+    from flyoff.study.run import Progress, Study
+
+__all__ = ["load", "run", "select"]
 
 
 def load(config: str | Path) -> Experiment:
@@ -50,11 +51,17 @@ def run(
     UserError
         For mistakes in the file and for folders that cannot be written.
     """
+    # loaded late: a mistake in a file is answered without tables and figures
+    from flyoff.report.views import markdown
+    from flyoff.study.run import carry_out, write_atomically
+
     experiment = config if isinstance(config, Experiment) else load(config)
     folder = Path(out) if out is not None else Path("results") / experiment.name
     study = carry_out(experiment, folder, jobs or os.cpu_count() or 1, progress)
     write_atomically(folder / "tables.md", markdown(study).encode())
     if figures:
+        from flyoff.report.figures import write_figures
+
         total = 3 * len({c.cell.condition.name for c in study.cells})
         for done, _ in enumerate(write_figures(study, folder / "figures"), 1):
             if progress is not None:

@@ -27,10 +27,16 @@ app = typer.Typer(
 )
 
 
+_INTERRUPTED = 130  # what the parser makes of Ctrl-C
+
+
 def main() -> None:
     """Entry point: mistakes as one line each, exit 2 (usage) or 1 (failure), no traceback."""
     try:
-        app(standalone_mode=False)
+        code = app(standalone_mode=False)
+        if code == _INTERRUPTED:
+            raise KeyboardInterrupt
+        sys.exit(code if isinstance(code, int) else 0)
     except UserError as why:
         for line in why.lines:
             print(line, file=sys.stderr)

@@ -10,6 +10,7 @@ import time
 from pathlib import Path
 
 import pytest
+from tests.conftest import SMALL
 
 FLYOFF = [sys.executable, "-m", "flyoff.cli"]
 
@@ -25,12 +26,14 @@ def without_cost(folder: Path) -> list[str]:
     return [line for line in lines if ",step,time" not in line]
 
 
-@pytest.fixture
-def reference(small, tmp_path):
-    file = small(runs=130, particles=1500)
-    done = run(file, "--out", tmp_path / "reference", "--jobs", 1)
+@pytest.fixture(scope="module")
+def reference(tmp_path_factory):
+    folder = tmp_path_factory.mktemp("reference")
+    file = folder / "experiment.yaml"
+    file.write_text(SMALL.format(runs=130, particles=1000))
+    done = run(file, "--out", folder / "out", "--jobs", 1)
     assert done.returncode == 0, done.stderr
-    return file, without_cost(tmp_path / "reference")
+    return file, without_cost(folder / "out")
 
 
 def start(file: Path, out: Path) -> subprocess.Popen[str]:

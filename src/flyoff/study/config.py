@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -16,7 +16,7 @@ from flyoff.registry import discover
 from flyoff.scores.contract import Divergence
 from flyoff.study.yaml_tree import Path_, Tree, read_yaml
 
-__all__ = ["Entry", "Experiment", "ProblemEntry", "load_experiment"]
+__all__ = ["Entry", "Experiment", "ProblemEntry", "load_experiment", "select"]
 
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}\Z")
 _LATER = {
@@ -151,6 +151,30 @@ def load_experiment(path: Path) -> Experiment:
         path.read_bytes(),
         tree.file,
     )
+
+
+def select(experiment: Experiment, only: Sequence[str]) -> Experiment:
+    """Keep the named problems, conditions and estimators; kinds that are not named stay whole.
+
+    Raises
+    ------
+    UserError
+        For a name that the experiment does not have.
+    """
+    kept: dict[str, Any] = {}
+    known: set[str] = set()
+    for kind in ("problems", "conditions", "estimators"):
+        entries = getattr(experiment, kind)
+        known |= {e.name for e in entries}
+        chosen = tuple(e for e in entries if e.name in only)
+        kept[kind] = chosen or entries
+    for name in only:
+        if name not in known:
+            raise UserError(
+                f"--only {name}: no problem, condition or estimator of that name"
+                f"{nearest(name, known)}"
+            )
+    return dataclasses.replace(experiment, **kept)
 
 
 class _Check:

@@ -8,20 +8,20 @@ import importlib.metadata
 import json
 import os
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import pandas as pd
 
-from flyoff.errors import UserError, nearest
+from flyoff.errors import UserError
 from flyoff.study.config import Experiment
 from flyoff.study.execute import run_units, time_cells
 from flyoff.study.plan import Block, blocks, cells, units
 from flyoff.study.store import Store, canonical, content_key, environment, source_digest
 from flyoff.study.table import CellData, build_table, merge_blocks, runs_frame, write_csv
 
-__all__ = ["Progress", "Study", "carry_out", "select", "write_atomically"]
+__all__ = ["Progress", "Study", "carry_out", "write_atomically"]
 
 Progress = Callable[[str, int, int], None]
 
@@ -46,30 +46,6 @@ class Study:
     manifest: pd.Series
     cells: tuple[CellData, ...]
     repaired: int = 0
-
-
-def select(experiment: Experiment, only: Sequence[str]) -> Experiment:
-    """Keep the named problems, conditions and estimators; kinds that are not named stay whole.
-
-    Raises
-    ------
-    UserError
-        For a name that the experiment does not have.
-    """
-    kept: dict[str, Any] = {}
-    known: set[str] = set()
-    for kind in ("problems", "conditions", "estimators"):
-        entries = getattr(experiment, kind)
-        known |= {e.name for e in entries}
-        chosen = tuple(e for e in entries if e.name in only)
-        kept[kind] = chosen or entries
-    for name in only:
-        if name not in known:
-            raise UserError(
-                f"--only {name}: no problem, condition or estimator of that name"
-                f"{nearest(name, known)}"
-            )
-    return replace(experiment, **kept)
 
 
 def carry_out(
