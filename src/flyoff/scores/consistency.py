@@ -62,7 +62,7 @@ class ConsistencyTrack:
             nis = np.where(np.isnan(old), 0, old) + innovation.nis
             self.nis[name][row] = np.where(good, nis, old)
             self.count[name][row] += np.where(good, innovation.count, 0)
-        if step.cov is None or step.factor is None:
+        if step.cov is None or step.factor is None or not self.blocks[""]:
             return
         space = self.context.model.space
         e = space.local(step.mean, step.truth)
