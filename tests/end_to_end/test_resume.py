@@ -10,6 +10,7 @@ import time
 from pathlib import Path
 
 import pytest
+
 from tests.conftest import SMALL
 
 FLYOFF = [sys.executable, "-m", "flyoff.cli"]

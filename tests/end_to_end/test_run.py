@@ -8,11 +8,11 @@ import numpy as np
 import pandas as pd
 import pytest
 from PIL import Image
-from tests.conftest import ROOT
 
 import flyoff
 from flyoff.report.views import LEGEND, LEGEND_RECORDED, markdown, views
 from flyoff.study.table import COLUMNS
+from tests.conftest import ROOT
 
 
 @pytest.fixture(scope="module")

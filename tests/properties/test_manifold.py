@@ -132,10 +132,10 @@ def test_mean_of_points_symmetric_about_a_centre_is_the_centre(centre, deltas, s
     np.testing.assert_allclose(deviations, moves, rtol=0, atol=1e-13 * scale)
     # about another of the points: the same centre, to what a fixed number of passes leaves
     other = points[:, about % points.shape[1]]
-    mean, _ = SPACE.mean(points, weights, other)
+    mean, _ = SPACE.mean(points, weights, other, passes=3)
     gap = SPACE.local(centre, mean)
     np.testing.assert_allclose(gap[[0, 1, 5, 6]], 0, rtol=0, atol=1e-14 * scale)
-    np.testing.assert_allclose(gap[2:5], 0, rtol=0, atol=2e-3 * np.abs(moves[2:5]).max() + 1e-14)
+    np.testing.assert_allclose(gap[2:5], 0, rtol=0, atol=1e-4 * np.abs(moves[2:5]).max() + 1e-14)
 
 
 @few

@@ -16,6 +16,7 @@ import pytest
 
 from flyoff.estimators.contract import Weighted, moments
 from flyoff.estimators.linearised import Linearised
+from flyoff.evidence.intervals import nees_band
 from flyoff.filtering import run_filter
 from flyoff.models.model import ModelSpec, SensorSpec, trace
 from flyoff.models.priors import GaussianPrior
@@ -119,6 +120,21 @@ def assert_share(inside: np.ndarray, level: float) -> None:
 def nees(track: ConsistencyTrack, d: int, rows: slice) -> np.ndarray:
     """NEES of the joint state, total of the d components."""
     return d * track.nees[""][rows]
+
+
+@pytest.mark.parametrize(
+    ("d", "runs", "low", "high"),
+    [
+        (2, 50, 1.4844, 2.5912),  # [1.5, 2.6] in the book
+        (4, 100, 3.4648, 4.5731),
+        (5, 250, 4.6156, 5.3995),
+        (2, 1, 0.0506, 7.3778),
+        (1, 100, 0.7422, 1.2956),  # time average of a hundred one-component readings
+    ],
+)
+def test_acceptance_regions(d, runs, low, high):
+    got = d * np.array(nees_band(d, runs))
+    np.testing.assert_allclose(got, [low, high], rtol=0, atol=5.1e-5)
 
 
 # far apart in time: the errors of the filter forget in about four steps

@@ -99,7 +99,7 @@ def test_van_loan_with_two_correlated_noises():
     np.testing.assert_allclose(q, want, rtol=1e-10)
 
 
-def test_block_helpers():
+def test_block_diagonal_of_blocks():
     rows = block_diagonal(white_acceleration(2.0, 0.7), diagonal(3.0, 4.0))
     want = np.zeros((4, 4))
     want[:2, :2] = ACCELERATION
@@ -107,7 +107,7 @@ def test_block_helpers():
     np.testing.assert_allclose(rows, want, rtol=TOLERANCE)
 
 
-def test_coordinated_turn_helpers():
+def test_coordinated_turn_functions():
     # 3 deg/s for 1 s: sin(wT)/w and (1 - cos wT)/w
     angle = math.radians(3.0)
     assert float(algebra.sinc(angle)) == pytest.approx(0.999543137, rel=TOLERANCE)

@@ -8,6 +8,7 @@ import sys
 from pathlib import Path
 
 import pytest
+
 from tests.conftest import ROOT
 
 SOURCES = sorted((ROOT / "src" / "flyoff").rglob("*.py"))

@@ -148,8 +148,8 @@ def test_refusals_name_the_function_and_the_rule(move):
 
 def test_refusals_say_what_happened():
     for move, words in (
-        (math_alone, "turned a component into nan while traced"),
-        (assignment_into_zeros, "turned a component into nan while traced"),
+        (math_alone, "turned a component into NaN while traced"),
+        (assignment_into_zeros, "turned a component into NaN while traced"),
         (an_if, "cannot be traced"),
         (missing_parameter, "drag"),
         (root_of_a_negative_number, "gives NaN at a probing point"),
@@ -581,6 +581,23 @@ def test_noise_factor_of_a_singular_covariance():
     )
     low = model.noise_factor(1.0, np.float64)[..., 0]
     np.testing.assert_allclose(low @ low.T, [[0.25, 0.5], [0.5, 1.0]], atol=1e-12)
+
+
+def test_noise_factor_keeps_variances_of_very_different_size():
+    # metres beside a bias in rad/s: small in the units chosen, but not nothing
+    space = StateSpace(Vector("position", 1, "m"), Vector("bias", 1, "rad/s"))
+
+    def move(x, u, w, p, dt):
+        return x.position + w.position, x.bias + w.bias
+
+    def noise(p, dt):
+        return diagonal(1e2, 1e-16)
+
+    model = trace(
+        ModelSpec(space=space, transition=move, noise=space, noise_covariance=noise, sensors=())
+    )
+    low = model.noise_factor(1.0, np.float64)[..., 0]
+    np.testing.assert_allclose(low, np.diag([10.0, 1e-8]), rtol=1e-14, atol=0)
 
 
 def test_assumed_scales(craft):

@@ -63,7 +63,7 @@ class _KalmanFilter:
     def update(
         self, belief: GaussianBelief, sensor: Sensor, z: Array, u: Array
     ) -> tuple[GaussianBelief, Innovation]:
-        p = self.model.parameters.astype(self.dtype, copy=False)
+        p, z = self.model.parameters.astype(self.dtype, copy=False), z.astype(self.dtype)
         predicted, h3 = sensor.linearise(belief.mean, u, p)
         runs, m, d = z.shape[-1], sensor.m, self.model.space.d
         h = _runs_first(h3)

@@ -130,6 +130,7 @@ class _ParticleFilter:
         self, belief: _Cloud, sensor: Sensor, z: Array, u: Array
     ) -> tuple[_Cloud, Innovation]:
         model, p = self.model, self.model.parameters.astype(self.dtype, copy=False)
+        z = z.astype(self.dtype, copy=False)
         seen = model.measure(sensor, belief.points, u)
         residual = sensor.space.local(seen, z[:, None])
         r = sensor.covariance(belief.points, u, p)

@@ -8,6 +8,7 @@ identity covariance - and the polynomial degree the rule declares.
 from __future__ import annotations
 
 import itertools
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Protocol
@@ -70,12 +71,26 @@ class PointSet:
         return bool(((self.points != 0).sum(axis=0) <= 1).all())
 
     def _check_degree(self, slack: float) -> None:
+        """Every moment up to the declared degree, over single axes and mixtures of a few."""
         x, w, d = self.points, self.mean_weights, self.points.shape[0]
-        if self.degree >= 3:
-            for i, j, k in itertools.combinations_with_replacement(range(min(d, 4)), 3):
-                third = abs((w * x[i] * x[j] * x[k]).sum())
-                if not third <= slack * 10:
-                    raise ValueError(f"point set declares degree 3, third moment is {third:.1e}")
+        third = np.einsum("j,ij,kj,lj->ikl", w, x, x, x)
+        if self.degree >= 3 and np.abs(third).max() > 10 * slack:
+            raise ValueError(f"point set declares degree {self.degree}, a third moment is not zero")
+        axes = sorted({*range(min(d, 4)), d - 1})
+        for order in range(4, self.degree + 1):
+            for chosen in itertools.combinations_with_replacement(axes, order):
+                got = float((w * np.prod(x[list(chosen)], axis=0)).sum())
+                wanted = math.prod(_gaussian_moment(chosen.count(a)) for a in set(chosen))
+                if not abs(got - wanted) <= 1e3 * slack * max(1, wanted):
+                    raise ValueError(
+                        f"point set declares degree {self.degree}, a moment of order {order} is "
+                        f"{got:.3g} instead of {wanted:g}"
+                    )
+
+
+def _gaussian_moment(k: int) -> int:
+    """E x^k of N(0, 1): (k - 1)!! for even k, else zero."""
+    return 0 if k % 2 else math.prod(range(k - 1, 0, -2))
 
 
 class PointRule(Protocol):

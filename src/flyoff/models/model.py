@@ -126,10 +126,11 @@ class Sensor:
         """Noise covariance (m, m, ..., M), or (m, m, 1) where it is common to all."""
         if not self.r_is_common:
             return self._covariance(x, u, p)
-        if x.dtype not in self.memo:
+        key = (x.dtype, p.tobytes())
+        if key not in self.memo:
             first = x.reshape(x.shape[0], -1)[:, :1]
-            self.memo[x.dtype] = self._covariance(first, u[:, :1], p)
-        return self.memo[x.dtype]
+            self.memo[key] = self._covariance(first, u[:, :1], p)
+        return self.memo[key]
 
     def _covariance(self, x: Array, u: Array, p: Array) -> Array:
         r = self.r_tape(x, u, p)
@@ -350,16 +351,19 @@ class Model:
 
 
 def _semidefinite_factor(w: Array) -> Array:
-    """Lower Cholesky factor that leaves exactly zero rows zero."""
-    dead = np.array([not w[i, i].any() for i in range(w.shape[0])])
-    safe = w.copy()
-    for i in np.flatnonzero(dead):
-        safe[i, i] = 1
-    low, ok = linalg.cholesky(safe)
-    if not ok.all():
-        raise ModelError("the process-noise covariance W is not positive semidefinite")
-    for i in np.flatnonzero(dead):
-        low[i, i] = 0
+    """Lower factor of a positive semidefinite W (q, q, 1): a zero pivot gives a zero column."""
+    low = np.zeros_like(w)
+    rest = w.copy()
+    slack = 1e-12 * max(float(np.abs(w).max(initial=0)), 1e-300)
+    for j in range(w.shape[0]):
+        pivot = float(rest[j, j, 0])
+        column = rest[j:, j]
+        if pivot <= slack:
+            if pivot < -slack or np.abs(column).max() > np.sqrt(slack):
+                raise ModelError("the process-noise covariance W is not positive semidefinite")
+            continue
+        low[j:, j] = column / np.sqrt(pivot)
+        rest[j:, j:] -= low[j:, j][:, None] * low[j:, j]
     return low
 
 
@@ -509,7 +513,8 @@ def _matrix(function: Function, d: int, *args: Any) -> Any:
         rows = function(*args)
     except Exception as why:
         raise ModelError(f"`{name}` cannot be traced ({_first_line(why)}): {_RULE}") from why
-    if len(rows) != d or any(len(r) != d for r in rows):
+    plain = isinstance(rows, tuple | list) and all(isinstance(r, tuple | list) for r in rows)
+    if not plain or len(rows) != d or any(len(r) != d for r in rows):
         raise ModelError(f"`{name}` must return {d} rows of {d} entries")
     return ca.vertcat(*(ca.horzcat(*_scalars(list(r), name)) for r in rows)) if d else ca.SX(0, 0)
 
@@ -520,10 +525,21 @@ def _scalars(flat: list[Any], name: str) -> list[Any]:
     out = []
     for e in flat:
         s = ca.SX(e)
-        if s.is_constant() and not np.isfinite(float(s)):
-            raise ModelError(f"`{name}` turned a component into {float(s)} while traced: {_RULE}")
+        if _has_nan(s):
+            raise ModelError(f"`{name}` turned a component into NaN while traced: {_RULE}")
         out.append(s)
     return out
+
+
+def _has_nan(expression: Any) -> bool:
+    """Whether a constant in the expression is not finite: what `math` and `float` leave behind."""
+    import casadi as ca
+
+    f = ca.Function("f", [ca.vertcat(*ca.symvar(expression))], [expression])
+    return any(
+        f.instruction_id(k) == ca.OP_CONST and not np.isfinite(f.instruction_constant(k))
+        for k in range(f.n_instructions())
+    )
 
 
 def _first_line(why: Exception) -> str:
@@ -601,6 +617,8 @@ def _verify(spec: ModelSpec, model: Model) -> None:
         return spec.space.local(mean, model.step(spec.space.retract(x, delta), u, 0.1))
 
     _check_jacobian(spec.transition, spec.space, f, moved)
+    w_got = model.w_tape(model.parameters, dt)
+    _compare_matrix(spec.noise_covariance, w_got, p, 0.1)
     for s in spec.sensors:
         sensor = model.sensors[s.name]
         z, h = sensor.linearise(x, u, model.parameters)
@@ -613,6 +631,8 @@ def _verify(spec: ModelSpec, model: Model) -> None:
             return s.space.local(z, model.measure(sensor, spec.space.retract(x, delta), u))
 
         _check_jacobian(s.measure, spec.space, h, seen, fine)
+        r_got = sensor.r_tape(x, u, model.parameters)
+        _compare_matrix(s.covariance, r_got[:, fine], *(_cut(v, fine) for v in names[:2]), p)
 
 
 def _probe(space: StateSpace, rng: np.random.Generator) -> Array:
@@ -633,9 +653,17 @@ def _cut(blocks: SimpleNamespace, mask: Array) -> SimpleNamespace:
     return SimpleNamespace(**{k: cut(v) for k, v in vars(blocks).items()})
 
 
+def _compare_matrix(function: Function, got: Array, *args: Any) -> None:
+    rows = function(*args)
+    _agree(getattr(function, "__name__", repr(function)), got, [e for r in rows for e in r])
+
+
 def _compare(function: Function, space: StateSpace, got: Array, *args: Any) -> None:
     name = getattr(function, "__name__", repr(function))
-    flat = space.pack(function(*args), f"`{name}`")
+    _agree(name, got, space.pack(function(*args), f"`{name}`"))
+
+
+def _agree(name: str, got: Array, flat: list[Any]) -> None:
     want = np.array([np.broadcast_to(np.asarray(e, dtype=float), got.shape[1:]) for e in flat])
     if np.isnan(want).any() or np.isnan(got).any():
         raise ModelError(f"`{name}` gives NaN at a probing point: {_RULE}")

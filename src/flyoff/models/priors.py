@@ -47,6 +47,11 @@ class Prior(Protocol):
         ...
 
 
+def _part(a: Array, index: slice | Array) -> Array:
+    """Some runs, runs last in memory too: reductions over another layout have other bits."""
+    return np.ascontiguousarray(a[..., index])
+
+
 @dataclass(frozen=True)
 class GaussianPrior:
     """N(mean, cov) in the tangent space at the mean: mean (n, M), cov (d, d, M)."""
@@ -67,11 +72,12 @@ class GaussianPrior:
 
     def components(self, k: int) -> tuple[Array, Array, Array]:
         """One component, whatever `k`: a Gaussian needs no splitting here."""
-        return np.zeros((1, self.mean.shape[1])), self.mean[:, None], self.cov[:, :, None]
+        even = np.zeros((1, self.mean.shape[1]), dtype=self.mean.dtype)
+        return even, self.mean[:, None], self.cov[:, :, None]
 
     def runs(self, index: slice | Array) -> GaussianPrior:
         """The prior of a part of the runs."""
-        return replace(self, mean=self.mean[:, index], cov=self.cov[..., index])
+        return replace(self, mean=_part(self.mean, index), cov=_part(self.cov, index))
 
     def cast(self, dtype: np.dtype) -> GaussianPrior:
         """The prior in another floating-point type."""
@@ -115,7 +121,7 @@ class BoxPrior:
 
     def runs(self, index: slice | Array) -> BoxPrior:
         """The prior of a part of the runs."""
-        return replace(self, centre=self.centre[:, index], half=self.half[:, index])
+        return replace(self, centre=_part(self.centre, index), half=_part(self.half, index))
 
     def cast(self, dtype: np.dtype) -> BoxPrior:
         """The prior in another floating-point type."""
@@ -142,9 +148,8 @@ class MixturePrior:
         runs = w.shape[1]
         heaviest = self.means[:, np.argmax(w, axis=0), np.arange(runs)]
         mean, dev = self.space.mean(self.means, w, heaviest, passes=3)
-        cov = np.einsum("km,ijkm->ijm", w, self.covs)
-        cov = cov + np.einsum("km,ikm,jkm->ijm", w, dev, dev)
-        return mean, cov
+        within = (w * self.covs).sum(axis=2)
+        return mean, within + linalg.product_t(w * dev, dev)
 
     def sample(self, streams: Streams, role: str, count: int) -> Array:
         """Draws (n, count, M): a component by its weight, then a Gaussian draw from it."""
@@ -165,9 +170,9 @@ class MixturePrior:
         """The prior of a part of the runs."""
         return replace(
             self,
-            log_weights=self.log_weights[:, index],
-            means=self.means[..., index],
-            covs=self.covs[..., index],
+            log_weights=_part(self.log_weights, index),
+            means=_part(self.means, index),
+            covs=_part(self.covs, index),
         )
 
     def cast(self, dtype: np.dtype) -> MixturePrior:
