@@ -72,8 +72,8 @@ class _MyFilter:
         p = self.model.parameters.astype(self.dtype, copy=False)
         predicted, h = sensor.linearise(belief.mean, u, p)
         missing = missing_components(z, belief.mean.shape[1])
-        cross = sensor.project(belief.cov, h)
-        s = sensor.spread(h, cross) + sensor.covariance(belief.mean, u, p)
+        cross = sensor.project(h, belief.cov)
+        s = sensor.spread(cross, h) + sensor.covariance(belief.mean, u, p)
         c = correct(cross, s, sensor.space.local(predicted, z), missing)
         # here the correction c.delta, c.gain, c.half would be used
         return belief, c.innovation

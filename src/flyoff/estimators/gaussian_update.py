@@ -1,6 +1,6 @@
 """The measurement correction every Gaussian filter shares.
 
-K = C S^-1 by a Cholesky solve, with C = cov(x, z) and S = cov(z); missing components are taken out
+K = C' S^-1 by a Cholesky solve, with C = cov(z, x) and S = cov(z); missing components are taken out
 by a zero cross-covariance, a zero residual and a unit variance, which equals an update with the
 rest (Y. Bar-Shalom, X. R. Li, T. Kirubarajan 2001, eq. 5.2.3-14 for the gain).
 """
@@ -22,7 +22,7 @@ __all__ = ["Correction", "correct", "correction_counts", "missing_components"]
 
 @dataclass(frozen=True)
 class Correction:
-    """Gain (d, m, M), its half W = L^-1 C' (m, d, M), state correction (d, M), diagnostics."""
+    """Gain K' (m, d, M), its half L^-1 C (m, d, M), state correction (d, M), diagnostics."""
 
     gain: Array
     half: Array
@@ -44,24 +44,24 @@ def correct(cross: Array, s: Array, residual: Array, missing: Array | None) -> C
 
     Parameters
     ----------
-    cross : (d, m, M), covariance of state and predicted measurement
+    cross : (m, d, M), C = cov(z, x)
     s : (m, m, M), covariance of the innovation
     residual : (m, M), NaN where missing
     missing : (m, M) or None
     """
-    m = residual.shape[0]
+    m, d, runs = cross.shape
     if missing is not None:
         s, residual = mask_missing(s, residual, missing)
-        cross = np.where(missing[None], cross.dtype.type(0), cross)
+        cross = np.where(missing[:, None], cross.dtype.type(0), cross)
     low, ok = linalg.cholesky(s)
-    # one substitution for C' and the residual together
-    both = np.empty((m, cross.shape[0] + 1, residual.shape[1]), cross.dtype)
-    both[:, :-1] = cross.swapaxes(0, 1)
-    both[:, -1] = residual
+    # one substitution for C and the residual together
+    both = np.empty((m, d + 1, runs), cross.dtype)
+    both[:, :d] = cross
+    both[:, d] = residual
     linalg.solve_lower(low, both)
-    half, white = both[:, :-1], both[:, -1]
+    half, white = both[:, :d], both[:, d]
     delta = linalg.einsum("mdr,mr->dr", half, white)
-    gain = linalg.back_substitute(low, half.copy()).swapaxes(0, 1)
+    gain = linalg.back_substitute(low, half.copy())
     return Correction(gain, half, delta, ok, Innovation(residual, low, white, missing))
 
 

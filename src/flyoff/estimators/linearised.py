@@ -85,7 +85,7 @@ class _LinearisedFilter:
 
     def predict(self, belief: GaussianBelief, u: Array, dt: float) -> GaussianBelief:
         mean, f, q = self.model.linearise(belief.mean, u, dt)
-        cov = linalg.symmetrise(linalg.product_t(linalg.product(f, belief.cov), f))
+        cov = linalg.symmetrise(linalg.product_t(linalg.product_t(f, belief.cov), f))
         cov += q
         return GaussianBelief(belief.step + 1, belief.fault, mean, cov)
 
@@ -100,15 +100,16 @@ class _LinearisedFilter:
         residual = sensor.space.local(predicted, z)
         if missing is not None:
             h = np.where(missing[:, None], self.dtype.type(0), h)
-        cross = sensor.project(cov, h)
-        s = sensor.spread(h, cross) + r
+        cross = sensor.project(h, cov)
+        s = sensor.spread(cross, h) + r
         c = correct(cross, s, residual, missing)
-        # X = (I - K H) P, then X (I - K H)' + K R K' = X - (X H' - K R) K', as rank-m products
-        new = linalg.product_t(c.gain, cross)
+        # X = P (I - K H)', then (I - K H) X + K R K' = X - K (H X - R K'), as rank-m products
+        new = linalg.t_product(cross, c.gain)
         np.subtract(cov, new, out=new)
         if self.choice.form == "joseph":
-            rest = sensor.project(new, h) - linalg.product(c.gain, r)
-            new -= linalg.product_t(rest, c.gain)
+            rest = sensor.project(h, new)
+            rest -= linalg.product(r, c.gain)
+            new -= linalg.t_product(c.gain, rest)
         new = space.reset(linalg.symmetrise(new), c.delta)
         fault = combine_faults(belief.fault, ~c.ok, Fault.NOT_POSITIVE_DEFINITE)
         mean = space.retract(x, c.delta)

@@ -113,7 +113,7 @@ class _ParticleFilter:
         few &= belief.fault == 0
         if not few.any():
             return points, lw, belief.parents
-        u = self.streams.uniform("particles:resample", (1,), belief.step)[0]
+        u = self.streams.uniform("particles:resample", (), belief.step)
         copies = systematic_counts(w[:, few].astype(float), u[few])
         parents = belief.parents.copy()
         parents[few] = (copies > 0).sum(axis=0)

@@ -125,7 +125,7 @@ class _SigmaPointFilter:
         weighted = dz * self.wc[:, None]
         p = model.parameters.astype(self.dtype, copy=False)
         s = linalg.product_t(weighted, dz) + sensor.covariance(belief.mean, u, p)
-        cross = linalg.product_t(dev, weighted)
+        cross = linalg.product_t(weighted, dev)
         missing = missing_components(z, predicted.shape[1])
         c = correct(cross, s, sensor.space.local(predicted, z), missing)
         cov = belief.cov - linalg.einsum("kim,kjm->ijm", c.half, c.half)

@@ -64,7 +64,7 @@ def sinc(x: Scalar) -> Scalar:
 
 
 def cosc(x: Scalar) -> Scalar:
-    """(1 - cos x)/x, exact to rounding at and near zero."""
+    """(1 - cos x)/x, without a hole at zero; relative error under 1e-13."""
     s = x * x
     near = s < _SMALL**2
     far_x = _guarded(near, x)

@@ -26,6 +26,7 @@ __all__ = [
     "product_t",
     "solve_lower",
     "symmetrise",
+    "t_product",
 ]
 
 
@@ -108,6 +109,11 @@ def product(a: Array, b: Array) -> Array:
 def product_t(a: Array, b: Array) -> Array:
     """A B' over the run axis: (i, k, M), (j, k, M) -> (i, j, M)."""
     return einsum("ikm,jkm->ijm", a, b)
+
+
+def t_product(a: Array, b: Array) -> Array:
+    """A' B over the run axis: (k, i, M), (k, j, M) -> (i, j, M)."""
+    return einsum("kim,kjm->ijm", a, b)
 
 
 def symmetrise(a: Array) -> Array:

@@ -99,14 +99,16 @@ class Streams:
 
     def normal(self, role: str, shape: tuple[int, ...], step: int = 0) -> Array:
         """Standard normals (*shape, M), float64."""
-        out = np.empty((len(self.runs), *shape))
+        out = np.empty((len(self.runs), *(shape or (1,))))
         for words, row in zip(self._keys(role), out, strict=True):
             self._at(words, step).standard_normal(out=row)
+        out = out if shape else out[:, 0]
         return np.ascontiguousarray(np.moveaxis(out, 0, -1))
 
     def uniform(self, role: str, shape: tuple[int, ...], step: int = 0) -> Array:
         """Uniforms on [0, 1), (*shape, M), float64."""
-        out = np.empty((len(self.runs), *shape))
+        out = np.empty((len(self.runs), *(shape or (1,))))
         for words, row in zip(self._keys(role), out, strict=True):
             self._at(words, step).random(out=row)
+        out = out if shape else out[:, 0]
         return np.ascontiguousarray(np.moveaxis(out, 0, -1))

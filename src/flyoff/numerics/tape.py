@@ -193,16 +193,6 @@ def _single_assignment(symbols: list[Any], outputs: list[Any]) -> tuple[list[_Op
             if name not in _UNARY and name not in _BINARY and name not in _COMPARE | {"TWICE": 0}:
                 raise ValueError(f"operation {name} has no counterpart on the tape")
             op = _Op(name, tuple(register[i] for i in ins))
-            if name in ("POW", "CONSTPOW"):
-                power = ops[op.args[1]]
-                if power.name == "CONST" and power.const in (3.0, 4.0):
-                    # products are ten times faster than a general power
-                    square = emit(_Op("SQ", op.args[:1]))
-                    op = (
-                        _Op("SQ", (square,))
-                        if power.const == 4
-                        else _Op("MUL", (square, op.args[0]))
-                    )
         register[outs[0]] = emit(op)
     zero = -1
     for i, v in enumerate(out):
