@@ -2,12 +2,14 @@
 
 Every function takes scalars that are either NumPy arrays (any common shape) or casadi symbols, so
 the same text serves a traced model and a batch of runs. Quaternions are scalar-first, body to NED.
-Sinc-like functions switch to a series below 0.1 rad, so that values and derivatives are exact to
-rounding at zero; the branch is a masked select, never a product.
+Sinc-like functions switch to a series near zero, so that values and derivatives are exact to
+rounding there; the branch is a masked select, never a product. The series reaches far enough that
+all runs usually take it, and then the tape leaves out the other branch.
 """
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import numpy as np
@@ -31,7 +33,10 @@ __all__ = [
 Scalar = Any
 Vec = tuple[Scalar, ...]
 
-_SMALL = 0.1  # rad: below this the series is used; its truncation error is under 1e-16 there
+_SMALL = 0.1  # rad: below this the series of quaternions are used, truncated under 1e-16
+_NEAR = 0.5  # rad: and here those of sinc and cosc, truncated under 1e-18
+_SINC = tuple((-1) ** n / math.factorial(2 * n + 1) for n in range(8))
+_COSC = tuple((-1) ** n / math.factorial(2 * n + 2) for n in range(8))
 
 
 def _select(cond: Scalar, a: Scalar, b: Scalar) -> Scalar:
@@ -57,18 +62,18 @@ def _series(s: Scalar, *coefficients: float) -> Scalar:
 def sinc(x: Scalar) -> Scalar:
     """sin(x)/x, exact to rounding at and near zero."""
     s = x * x
-    near = s < _SMALL**2
+    near = s < _NEAR**2
     far_x = _guarded(near, x)
-    series = _series(s, 1, -1 / 6, 1 / 120, -1 / 5040, 1 / 362880)
+    series = _series(s, *_SINC)
     return _select(near, series, np.sin(x) / far_x)
 
 
 def cosc(x: Scalar) -> Scalar:
     """(1 - cos x)/x, without a hole at zero; relative error under 1e-13."""
     s = x * x
-    near = s < _SMALL**2
+    near = s < _NEAR**2
     far_x = _guarded(near, x)
-    series = x * _series(s, 1 / 2, -1 / 24, 1 / 720, -1 / 40320, 1 / 3628800)
+    series = x * _series(s, *_COSC)
     return _select(near, series, (1 - np.cos(x)) / far_x)
 
 
