@@ -202,7 +202,8 @@ def _credibility(
         rows.append(row)
     where = "over the segments" if recorded else f"window `{window}`"
     notes = [
-        f"NEES and NIS per component, {where}; lost runs are counted over the whole run, of "
+        f"NEES and NIS per component, {where}, a mean without interval has a run beyond 5 medians; "
+        f"lost runs are counted over the whole run, of "
         f"{problem.runs}; time is a run and step, amortised over a batch, its ratio to "
         f"`{cells[0].cell.estimator.name}`; operations a run and step",
     ]
