@@ -155,7 +155,7 @@ def _grid(count: int, legend: bool = True) -> tuple[Figure, list[Any]]:
     columns = min(count, 2)
     rows = math.ceil(count / columns)
     figure, axes = plt.subplots(
-        rows, columns, figsize=(4.6 * columns, 2.9 * rows + 0.8), squeeze=False,
+        rows, columns, figsize=(max(7.0, 4.6 * columns), 2.9 * rows + 1.0), squeeze=False,
         layout="constrained",
     )  # fmt: skip
     flat = list(axes.ravel())
@@ -181,7 +181,7 @@ def _legend(figure: Figure, axes: list[Any]) -> None:
         for handle, label in zip(*ax.get_legend_handles_labels(), strict=True):
             seen.setdefault(label, handle)
     figure.legend(
-        list(seen.values()), list(seen), loc="outside lower center", ncols=min(len(seen), 5),
+        list(seen.values()), list(seen), loc="outside lower center", ncols=min(len(seen), 4),
         frameon=False,
     )  # fmt: skip
 
@@ -207,7 +207,7 @@ def _nees(study: Study, cells: list[CellData]) -> Figure:
             title = f"{problem.name}: a recording, no band"
         else:
             ax.axhspan(float(low), float(high), color="#bbbbbb", alpha=0.55, linewidth=0, zorder=0,
-                       label="95 % band of a consistent filter")  # fmt: skip
+                       label="95 % band if consistent")  # fmt: skip
             title = f"{problem.name}: {problem.runs} runs, d = {size}"
         for edge in (0.8, 1.25):
             ax.axhline(edge, color="#777777", linewidth=0.7, linestyle=(0, (1, 2)))
@@ -220,8 +220,8 @@ def _nees(study: Study, cells: list[CellData]) -> Figure:
     _legend(figure, axes)
     condition = cells[0].cell.condition.name
     figure.suptitle(
-        f"Normalised NEES over time: {condition} (dotted: practical band 0.8 to 1.25; "
-        "above: overconfident)",
+        f"Normalised NEES over time: {condition}\n"
+        "dotted: practical band 0.8 to 1.25; above it a filter is overconfident",
         fontsize=10,
     )
     return figure
@@ -281,8 +281,8 @@ def _accuracy_cost(study: Study, cells: list[CellData]) -> Figure:
     _legend(figure, axes)
     condition = cells[0].cell.condition.name
     figure.suptitle(
-        f"Accuracy against cost: {condition} (bars: 95 % interval over runs; extremes of the "
-        "timing rounds)",
+        f"Accuracy against cost: {condition}\n"
+        "bars: 95 % interval over runs; extremes of the timing rounds",
         fontsize=10,
     )
     return figure
