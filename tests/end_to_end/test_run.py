@@ -179,3 +179,24 @@ def test_shipped_experiments_are_valid():
     assert files
     for file in files:
         assert load_experiment(file).estimators
+
+
+def test_failed_runs_are_counted_with_their_reason(tmp_path):
+    """Without redrawing, a second sensor update at one time loses definiteness in every run."""
+    file = tmp_path / "x.yaml"
+    file.write_text(
+        "format: 1\nexperiment: x\nseed: 1\nruns: 5\n"
+        "problems: {flight: {kind: body-attitude}}\n"
+        "estimators:\n  ekf: {family: linearised}\n"
+        "  stale: {family: sigma-point, points: {rule: cubature}, redraw: false}\n"
+    )
+    study = flyoff.run(file, out=tmp_path / "out", jobs=1)
+    failed = rows(study.table, quantity="runs", statistic="failed").set_index("estimator")
+    assert failed.loc["stale", "value"] == 1
+    assert failed.loc["stale", "note"] == "5 of 5; 5 covariance not positive definite"
+    assert failed.loc["ekf", "value"] == 0
+    assert failed.loc["ekf", "high"] == pytest.approx(0.5218, abs=1e-4)  # 1 - 0.025^(1/5)
+    typical = rows(study.table, estimator="stale", quantity="attitude", statistic="rmse-typical")
+    assert typical.value.isna().all()
+    assert typical.note.str.startswith("5 of 5 without a value").all()
+    assert any("stale failed in 5 of 5" in note for view in views(study) for note in view.notes)

@@ -207,6 +207,10 @@ def _credibility(
         f"{problem.runs}; time is a run and step, amortised over a batch, its ratio to "
         f"`{cells[0].cell.estimator.name}`; operations a run and step",
     ]
+    for c in cells:
+        lost_row = index.rows.get((c.cell.estimator.name, "all", "runs", "failed"))
+        if lost_row is not None and lost_row.value > 0:
+            notes.append(f"{c.cell.estimator.name} failed in {lost_row.note}")
     notes += [f"truth differs from the filter model: {m}" for m in problem.problem.mismatches]
     return View(f"{title}: consistency, lost runs, cost", heads, rows, notes=notes)
 

@@ -29,10 +29,12 @@ class ErrorTrack:
         self.direct = {
             q.name: np.full(shape, np.nan) for q in context.quantities if q.error is not None
         }
+        self.alive = np.zeros(shape, dtype=bool)
         self.kept: Array | None = None
 
     def observe(self, step: Step) -> None:
         """Take in one step."""
+        self.alive[step.k - 1] = step.alive
         for q in self.context.quantities:
             if q.error is not None:
                 size = q.magnitude(step.truth, step.mean)
@@ -66,8 +68,9 @@ class Accuracy(PlainScore):
         for name, size in self.track.magnitudes().items():
             for window in self.context.windows:
                 part = size[window.slice]
-                known = ~np.isnan(part).all(axis=1)  # truth may be unknown at some times
-                part = part[known]
+                # truth may be unknown at some times: those are left out, failed runs are not
+                unknown = (np.isnan(part) & self.track.alive[window.slice]).any(axis=1)
+                part = part[~unknown]
                 key = f"{window.name}/{name}"
                 out[f"{key}/rms"] = np.sqrt(np.mean(part**2, axis=0))
                 quantiles = np.quantile(part, [0.5, 0.95, 0.99], axis=0)

@@ -12,6 +12,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
+from flyoff.estimators.contract import Fault
 from flyoff.filtering import Outcome
 from flyoff.models.model import Model
 from flyoff.numerics.spaces import Array
@@ -84,4 +85,8 @@ class LostRuns(PlainScore):
         names = ["failed", "overconfident"]
         if any(q.name in divergence.bounds for q in quantities):
             names[1:1] = ["diverged", "never-converged"]
-        return [Statistic("runs", n, f"runs/{n}", "rate") for n in names]
+        reasons = {"reasons": "runs/fault", "texts": {int(f): f.text for f in Fault if f}}
+        return [
+            Statistic("runs", n, f"runs/{n}", "rate", options=reasons if n == "failed" else {})
+            for n in names
+        ]

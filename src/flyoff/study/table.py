@@ -120,7 +120,8 @@ def _simulated_rows(d: CellData) -> list[dict[str, Any]]:
             if values is None:
                 rows.append(_row("all", s, _not_assessable(d)))
             else:
-                rows.append(_row("all", s, REDUCTIONS["rate"](values, s.options)))
+                estimate = REDUCTIONS["rate"](values, s.options)
+                rows.append(_row("all", s, estimate, _reasons(d, s)))
             continue
         for window in windows:
             if s.reduction == "in-band":
@@ -133,6 +134,15 @@ def _simulated_rows(d: CellData) -> list[dict[str, Any]]:
                 estimate = _not_assessable(d)
             rows.append(_row(window, s, estimate, note))
     return rows
+
+
+def _reasons(d: CellData, s: Statistic) -> str:
+    """How many runs were lost for which reason."""
+    if "reasons" not in s.options:
+        return ""
+    codes = d.per_run[f"all/{s.options['reasons']}"]
+    tally = [(int((codes == code).sum()), text) for code, text in s.options["texts"].items()]
+    return ", ".join(f"{count} {text}" for count, text in tally if count)
 
 
 def _not_assessable(d: CellData) -> Estimate:
@@ -186,7 +196,8 @@ def _recorded_rows(d: CellData) -> list[dict[str, Any]]:
             if values is not None:
                 note = f"{int(np.nansum(values))} of {len(values)} drawn first estimates"
                 value = float(np.nanmean(values))
-                rows.append(_row("all", s, Estimate(value, units=len(values), note=note)))
+                estimate = Estimate(value, units=len(values), note=note)
+                rows.append(_row("all", s, estimate, _reasons(d, s)))
             continue
         if s.reduction not in _RECORDED:
             continue
