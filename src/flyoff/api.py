@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from flyoff.study.config import Experiment, load_experiment, select
+from flyoff.study.custom import load_user_file
 
 if TYPE_CHECKING:
     from flyoff.study.run import Progress, Study
@@ -14,14 +16,16 @@ if TYPE_CHECKING:
 __all__ = ["load", "run", "select"]
 
 
-def load(config: str | Path) -> Experiment:
-    """Read and check an experiment file.
+def load(config: str | Path, with_files: Sequence[str | Path] = ()) -> Experiment:
+    """Read and check an experiment file; `with_files` hold the user's own estimators.
 
     Raises
     ------
     UserError
         Every mistake with file and line.
     """
+    for file in with_files:
+        load_user_file(Path(file))
     return load_experiment(Path(config))
 
 
@@ -31,6 +35,7 @@ def run(
     jobs: int | None = None,
     progress: Progress | None = None,
     figures: bool = True,
+    with_files: Sequence[str | Path] = (),
 ) -> Study:
     """Run an experiment, or go on with one that was stopped, and write its results.
 
@@ -41,6 +46,7 @@ def run(
     jobs : worker processes; one a core by default
     progress : called with (what, done, total)
     figures : whether to draw them
+    with_files : Python files with the user's own estimators
 
     Returns
     -------
@@ -55,7 +61,7 @@ def run(
     from flyoff.report.views import markdown
     from flyoff.study.run import carry_out, write_atomically
 
-    experiment = config if isinstance(config, Experiment) else load(config)
+    experiment = config if isinstance(config, Experiment) else load(config, with_files)
     folder = Path(out) if out is not None else Path("results") / experiment.name
     study = carry_out(experiment, folder, jobs or os.cpu_count() or 1, progress)
     write_atomically(folder / "tables.md", markdown(study).encode())

@@ -81,6 +81,10 @@ def run(
         list[str] | None,
         typer.Option(help="Keep only this problem, condition or estimator; may be repeated."),
     ] = None,
+    with_file: Annotated[
+        list[Path] | None,
+        typer.Option("--with", help="A Python file with your estimators; may be repeated."),
+    ] = None,
     plan: Annotated[
         bool, typer.Option("--plan", help="Show cells, steps, memory and time; run nothing.")
     ] = False,
@@ -88,7 +92,7 @@ def run(
     """Run an experiment, or go on with one that was stopped."""
     from flyoff import api
 
-    experiment = api.select(api.load(config), only or [])
+    experiment = api.select(api.load(config, with_file or ()), only or [])
     if plan:
         _print_plan(experiment, jobs)
         return

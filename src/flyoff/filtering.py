@@ -67,10 +67,14 @@ class Observer(Protocol):
 
 @dataclass(frozen=True)
 class Outcome:
-    """Which runs failed: fault code (M,), step (M,) where it was first seen, 0 if it was not."""
+    """Which runs failed: fault code (M,), step (M,) where it was first seen, 0 if it was not.
+
+    `messages` (M,) holds what a failed run said, or is empty.
+    """
 
     fault: Array
     step: Array
+    messages: Array | None = None
 
 
 @dataclass
@@ -139,7 +143,8 @@ def run_filter(
             step = Step(k, recording.truth[k], mean, cov, low, ess, fault == 0, tuple(seen))
             for watcher in watchers:
                 watcher.observe(step)
-    return Outcome(fault, fault_step)
+    said = getattr(belief, "messages", ("",) * runs)
+    return Outcome(fault, fault_step, np.array(said, dtype="U200"))
 
 
 def arrival_table(

@@ -198,7 +198,8 @@ def _credibility(
             row.append(_count(index, n, lost))
         row.append(number(index.value(n, "all", "step", "time")))
         row.append(number(index.value(n, "all", "step", "time-ratio")))
-        row.append(f"{index.value(n, 'all', 'step', 'operations'):.0f}")
+        operations = index.value(n, "all", "step", "operations")
+        row.append("-" if math.isnan(operations) else f"{operations:.0f}")
         rows.append(row)
     where = "over the segments" if recorded else f"window `{window}`"
     notes = [

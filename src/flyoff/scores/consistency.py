@@ -57,9 +57,10 @@ class ConsistencyTrack:
         """Take in one step."""
         row = step.k - 1
         for name, innovation in step.innovations:
-            good = step.alive & (innovation.count > 0)
+            fresh = innovation.nis
+            good = step.alive & (innovation.count > 0) & np.isfinite(fresh)
             old = self.nis[name][row]
-            nis = np.where(np.isnan(old), 0, old) + innovation.nis
+            nis = np.where(np.isnan(old), 0, old) + fresh
             self.nis[name][row] = np.where(good, nis, old)
             self.count[name][row] += np.where(good, innovation.count, 0)
         if step.cov is None or step.factor is None or not self.blocks[""]:

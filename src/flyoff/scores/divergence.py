@@ -53,6 +53,12 @@ class LostRuns(PlainScore):
             "all/runs/fault": outcome.fault.astype(np.int64),
             "all/runs/fault-step": outcome.step,
             "all/runs/failed": failed.astype(float),
+            "all/runs/fault-message": np.array(
+                ["" if m is None else m for m in outcome.messages]
+                if outcome.messages is not None
+                else [""] * runs,
+                dtype="U200",
+            ),
         }
         never = np.zeros(runs, dtype=bool)
         diverged = np.zeros(runs, dtype=bool)

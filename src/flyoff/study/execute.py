@@ -15,12 +15,15 @@ from typing import Any
 
 import numpy as np
 
+from flyoff.errors import UserError
+from flyoff.estimators.guarded import Guarded
 from flyoff.filtering import Outcome, arrival_table, run_filter
 from flyoff.models.model import Model
 from flyoff.numerics.spaces import Array
 from flyoff.numerics.streams import Streams
 from flyoff.recordings import Recording
 from flyoff.study.config import Entry, Experiment, ProblemEntry
+from flyoff.study.custom import is_custom, load_user_file, loaded_files
 from flyoff.study.plan import Block, Unit, cells, make_context, make_recording, make_scores
 from flyoff.study.store import Store
 
@@ -85,9 +88,8 @@ def _batches(
             few, own = few.padded(), own.padded()
         context = make_context(unit.problem, model, few)
         scores = make_scores(context)
-        outcome = run_filter(
-            estimator.bind(model, own), model, few, context.tracks.values(), unit.late
-        )
+        bound = bind(estimator, model, own)
+        outcome = run_filter(bound, model, few, context.tracks.values(), unit.late)
         arrays = _collect(scores, outcome)
         if alone:
             arrays = {k: v[:, :1] if k.startswith("profile:") else v[:1] for k, v in arrays.items()}
@@ -100,6 +102,20 @@ def _batches(
             axis = 1 if key.startswith("profile:") else 0
             joined[key] = np.concatenate([p[key] for p in parts], axis=axis)
     return joined
+
+
+def bind(estimator: Any, model: Model, streams: Streams) -> Any:
+    """A filter for the runs of `streams`; one from outside the package is guarded."""
+    if not is_custom(estimator):
+        return estimator.bind(model, streams)
+    try:
+        inner = estimator.bind(model, streams)
+    except Exception as why:
+        raise UserError(
+            f"estimator `{type(estimator).__name__}` cannot be bound: {type(why).__name__}: {why}",
+            code=1,
+        ) from None
+    return Guarded(inner, model, len(streams))
 
 
 def _collect(scores: list[Any], outcome: Outcome) -> dict[str, Array]:
@@ -131,8 +147,10 @@ def _block_arrays(arrays: dict[str, Array], part: slice, with_trace: bool) -> di
 # -- processes -------------------------------------------------------------------------------------
 
 
-def _start_worker() -> None:
+def _start_worker(files: Sequence[Path] = ()) -> None:
     """Workers leave Ctrl-C to the parent and end with it, even if it is killed."""
+    for file in files:
+        load_user_file(file)
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     parent = multiprocessing.parent_process()
 
@@ -159,7 +177,10 @@ def run_units(
         os.environ.setdefault(name, "1")
     spawn = multiprocessing.get_context("spawn")
     pool = futures.ProcessPoolExecutor(
-        min(jobs, len(work)), mp_context=spawn, initializer=_start_worker
+        min(jobs, len(work)),
+        mp_context=spawn,
+        initializer=_start_worker,
+        initargs=(loaded_files(),),
     )
     try:
         pending = [pool.submit(evaluate, unit, str(folder)) for unit in work]
@@ -209,7 +230,7 @@ def _time_problem(
         batch = max(2, min(e.what.batch(model), runs))
         part = slice(0, batch)
         few, own = middle.select(part), streams.select(part)
-        bound = e.what.bind(model, own)
+        bound = bind(e.what, model, own)
         probe = _timed(bound, model, few.stretch(0, 6))
         steps = int(np.clip(_TIMED_SECONDS / max(probe / 6, 1e-9), 6, middle.steps))
         prepared.append((e, bound, few.stretch(0, steps), batch))

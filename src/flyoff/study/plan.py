@@ -18,6 +18,7 @@ from flyoff.recordings import Recording
 from flyoff.registry import discover
 from flyoff.scores.contract import Context, Window
 from flyoff.study.config import Entry, Experiment, ProblemEntry
+from flyoff.study.custom import digest_of
 from flyoff.study.store import CHUNK, content_key
 
 __all__ = [
@@ -106,6 +107,7 @@ def blocks(experiment: Experiment, cell: Cell) -> list[Block]:
             seed=experiment.seed,
             purpose="test",
             precision="double",
+            user_file=digest_of(cell.estimator.what),
         )
         out.append(Block(cell, first, last, key))
     return out

@@ -141,8 +141,13 @@ def _reasons(d: CellData, s: Statistic) -> str:
     if "reasons" not in s.options:
         return ""
     codes = d.per_run[f"all/{s.options['reasons']}"]
-    tally = [(int((codes == code).sum()), text) for code, text in s.options["texts"].items()]
-    return ", ".join(f"{count} {text}" for count, text in tally if count)
+    said = d.per_run[f"all/{s.options['reasons']}-message"]
+    tally: dict[str, int] = {}
+    for code, message in zip(codes, said, strict=True):
+        if code:
+            text = s.options["texts"][int(code)] + (f" ({message})" if message else "")
+            tally[text] = tally.get(text, 0) + 1
+    return ", ".join(f"{count} {text}" for text, count in tally.items())
 
 
 def _not_assessable(d: CellData) -> Estimate:

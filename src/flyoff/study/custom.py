@@ -1,0 +1,86 @@
+"""A user's own file with estimators, given by ``--with``: loaded by path, hashed, never by name.
+
+A config never names code to import. The file's classes register themselves like any others; the
+file's hash is in the key of every block it had a part in.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import importlib.util
+import sys
+from pathlib import Path
+from typing import Any
+
+from flyoff.errors import UserError
+
+__all__ = ["digest_of", "is_custom", "load_user_file", "loaded_files"]
+
+_PREFIX = "flyoff_with_"
+_loaded: dict[str, tuple[Path, str]] = {}
+
+
+def load_user_file(path: Path) -> None:
+    """Import a file by its path, once.
+
+    Raises
+    ------
+    UserError
+        If it cannot be read, does not import, or registers nothing.
+    """
+    try:
+        content = path.read_bytes()
+    except OSError as why:
+        raise UserError(f"{path}: cannot be read ({why.strerror})") from None
+    digest = hashlib.sha256(content).hexdigest()
+    name = f"{_PREFIX}{path.stem}_{digest[:8]}"
+    if name in _loaded:
+        return
+    spec = importlib.util.spec_from_file_location(name, path)
+    if spec is None or spec.loader is None:
+        raise UserError(f"{path}: is not a Python file")
+    module = importlib.util.module_from_spec(spec)
+    sys.modules[name] = module
+    try:
+        spec.loader.exec_module(module)
+    except UserError:
+        raise
+    except BaseException as why:
+        del sys.modules[name]
+        if isinstance(why, KeyboardInterrupt):
+            raise
+        line = _line(why, path)
+        raise UserError(f"{path}{line}: does not import: {type(why).__name__}: {why}") from None
+    _loaded[name] = (path, digest)
+
+
+def _line(why: BaseException, path: Path) -> str:
+    if isinstance(why, SyntaxError) and why.lineno:
+        return f":{why.lineno}"
+    trace, line = why.__traceback__, ""
+    while trace is not None:
+        if trace.tb_frame.f_code.co_filename == str(path):
+            line = f":{trace.tb_lineno}"
+        trace = trace.tb_next
+    return line
+
+
+def loaded_files() -> list[Path]:
+    """Files loaded so far."""
+    return [path for path, _ in _loaded.values()]
+
+
+def is_custom(thing: Any) -> bool:
+    """Whether an object's class comes from outside this package."""
+    return not type(thing).__module__.startswith("flyoff.")
+
+
+def digest_of(thing: Any) -> str:
+    """Hash of the file an object's class comes from; empty for the package's own classes."""
+    if not is_custom(thing):
+        return ""
+    name = type(thing).__module__
+    if name in _loaded:
+        return _loaded[name][1]
+    file = getattr(sys.modules.get(name), "__file__", None)
+    return hashlib.sha256(Path(file).read_bytes()).hexdigest() if file else name
