@@ -7,13 +7,19 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from flyoff.errors import UserError
+from flyoff.registry import lookup
 from flyoff.study.config import Experiment, load_experiment, select
 from flyoff.study.custom import load_user_file
 
 if TYPE_CHECKING:
+    from flyoff.checks.conformance import Verdict
+    from flyoff.checks.crosscheck import Comparison
+    from flyoff.checks.inspection import Inspection
+    from flyoff.checks.reproduce import Reproduction
     from flyoff.study.run import Progress, Study
 
-__all__ = ["load", "run", "select"]
+__all__ = ["crosscheck", "inspect", "load", "reproduce", "run", "select", "vet"]
 
 
 def load(config: str | Path, with_files: Sequence[str | Path] = ()) -> Experiment:
@@ -27,6 +33,76 @@ def load(config: str | Path, with_files: Sequence[str | Path] = ()) -> Experimen
     for file in with_files:
         load_user_file(Path(file))
     return load_experiment(Path(config))
+
+
+def reproduce(
+    folder: str | Path, jobs: int | None = None, progress: Progress | None = None
+) -> Reproduction:
+    """Run a results folder's experiment again in a scratch folder and compare cell by cell."""
+    from flyoff.checks.reproduce import reproduce as repeat
+
+    return repeat(Path(folder), jobs or os.cpu_count() or 1, progress)
+
+
+def crosscheck(
+    config: str | Path, runs: int | None = None, with_files: Sequence[str | Path] = ()
+) -> list[Comparison]:
+    """Compare an experiment's estimators with a reference library on the same recordings."""
+    from flyoff.checks.crosscheck import crosscheck as compare
+
+    return compare(load(config, with_files), runs)
+
+
+def vet(what: str | Path) -> dict[str, list[Verdict]]:
+    """Check the promises of a family, or of every estimator in a file, in default options.
+
+    Raises
+    ------
+    UserError
+        If there is no such family or file, or an estimator has no default options.
+    """
+    from flyoff.checks.conformance import vet as check
+    from flyoff.registry import discover
+
+    if str(what).endswith(".py"):
+        before = set(discover("estimator"))
+        load_user_file(Path(what))
+        found = {k: c for k, c in discover("estimator").items() if k not in before}
+        if not found:
+            raise UserError(f"{what}: registers no estimator")
+    else:
+        found = {str(what): lookup("estimator", str(what))}
+    out = {}
+    for name, cls in found.items():
+        try:
+            estimator = cls()
+        except Exception as why:
+            first = str(why).splitlines()[0]
+            raise UserError(f"{name}: has no default options ({first})") from None
+        out[name] = check(estimator)
+    return out
+
+
+def inspect(
+    folder: str | Path, problem: str, estimator: str, run: int, condition: str | None = None
+) -> tuple[Inspection, Path, Path]:
+    """Simulate one run again; returns it with the CSV and the figure written for it."""
+    from flyoff.checks.inspection import inspect_run
+    from flyoff.report.figures import write_inspection
+    from flyoff.study.run import write_atomically
+
+    found = inspect_run(Path(folder), problem, estimator, run, condition)
+    where = Path(folder) / "inspect"
+    name = f"{problem}-{found.cell.condition.name}-{estimator}-run{run}"
+    table, figure = where / f"{name}.csv", where / f"{name}.png"
+    try:
+        where.mkdir(parents=True, exist_ok=True)
+    except OSError as why:
+        raise UserError(f"{where}: cannot be written ({why.strerror})", code=1) from None
+    text = found.steps.to_csv(index=False, float_format="%.9g", lineterminator="\n")
+    write_atomically(table, text.encode())
+    write_inspection(found, figure)
+    return found, table, figure
 
 
 def run(

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import contextlib
 import sys
+from collections.abc import Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -13,7 +15,7 @@ from flyoff.errors import UserError
 
 if TYPE_CHECKING:
     from flyoff.study.config import Experiment
-    from flyoff.study.run import Study
+    from flyoff.study.run import Progress, Study
 
 __all__ = ["app", "main"]
 
@@ -27,6 +29,10 @@ app = typer.Typer(
 )
 
 
+_WithFile = Annotated[
+    list[Path] | None,
+    typer.Option("--with", help="A Python file with your estimators; may be repeated."),
+]
 _INTERRUPTED = 130  # what the parser makes of Ctrl-C
 
 
@@ -81,10 +87,7 @@ def run(
         list[str] | None,
         typer.Option(help="Keep only this problem, condition or estimator; may be repeated."),
     ] = None,
-    with_file: Annotated[
-        list[Path] | None,
-        typer.Option("--with", help="A Python file with your estimators; may be repeated."),
-    ] = None,
+    with_file: _WithFile = None,
     plan: Annotated[
         bool, typer.Option("--plan", help="Show cells, steps, memory and time; run nothing.")
     ] = False,
@@ -96,8 +99,116 @@ def run(
     if plan:
         _print_plan(experiment, jobs)
         return
-    study = _run_with_progress(experiment, out, jobs)
+    with _progress() as advance:
+        study = api.run(experiment, out=out, jobs=jobs, progress=advance)
     _print_study(study)
+
+
+@app.command()
+def reproduce(
+    folder: Annotated[Path, typer.Argument(help="A results folder.")],
+    jobs: Annotated[int | None, typer.Option(min=1, max=256, help="Worker processes.")] = None,
+) -> None:
+    """Run a results folder's experiment again and compare it cell by cell."""
+    from flyoff import api
+
+    with _progress() as advance:
+        outcome = api.reproduce(folder, jobs=jobs, progress=advance)
+    for label, same in (("platform", outcome.same_platform), ("source", outcome.same_source)):
+        print(f"{label}: {'as stored' if same else 'another one than stored'}")
+    for rule, count in outcome.checked.items():
+        print(f"{count:6d} cells held to: {rule}")
+    for d in outcome.differences:
+        print(f"differs: {d.cell}: {d.stored:.9g} stored, {d.repeated:.9g} repeated ({d.rule})")
+    print("everything agrees" if outcome.agrees else f"{len(outcome.differences)} cells differ")
+    raise typer.Exit(0 if outcome.agrees else 1)
+
+
+@app.command()
+def crosscheck(
+    config: Annotated[Path, typer.Argument(help="Experiment file (YAML).")],
+    runs: Annotated[
+        int | None, typer.Option(min=1, help="Runs to compare; the reference is slow.")
+    ] = None,
+    with_file: _WithFile = None,
+) -> None:
+    """Compare with a general-purpose reference library on the same recordings."""
+    from rich.table import Table
+
+    from flyoff import api
+
+    found = api.crosscheck(config, runs, with_file or ())
+    console = _console()
+    table = Table(
+        title="Largest deviation over all steps and runs", title_justify="left", box=_box()
+    )
+    for head in ("problem", "estimator", "reference", "outcome"):
+        table.add_column(head)
+    for head in ("mean", "covariance", "tolerance", "runs"):
+        table.add_column(head, justify="right")
+    for c in found:
+        numbers = ["-", "-", "-", "-"]
+        if c.outcome != "cannot":
+            sizes = (c.deviation_mean, c.deviation_cov, c.tolerance)
+            numbers = [*(f"{x:.1e}" for x in sizes), str(c.runs)]
+        table.add_row(c.problem, c.estimator, c.reference, c.outcome, *numbers)
+    console.print(table)
+    for c in found:
+        if c.why:
+            console.print(f"{c.problem}, {c.estimator}: {c.why}")
+    bad = [c for c in found if c.outcome == "differs"]
+    console.print(f"{len(bad)} differ" if bad else "no comparison differs")
+    raise typer.Exit(1 if bad else 0)
+
+
+@app.command()
+def vet(
+    what: Annotated[
+        str, typer.Argument(help="A family by name, or a Python file with your estimators.")
+    ],
+) -> None:
+    """Check what every estimator promises, with the evidence."""
+    from rich.table import Table
+
+    from flyoff import api
+
+    console = _console()
+    broken = 0
+    for name, verdicts in api.vet(what).items():
+        table = Table(title=name, title_justify="left", title_style="bold", box=_box())
+        for head in ("promise", "outcome", "evidence"):
+            table.add_column(head, no_wrap=head != "evidence")
+        for v in verdicts:
+            table.add_row(v.promise, v.outcome, v.evidence)
+            broken += v.outcome == "broken"
+        console.print(table)
+    console.print(f"{broken} promises broken" if broken else "no promise broken")
+    raise typer.Exit(1 if broken else 0)
+
+
+@app.command()
+def inspect(
+    folder: Annotated[Path, typer.Argument(help="A results folder.")],
+    problem: Annotated[str, typer.Option(help="Problem, as named in the experiment.")],
+    estimator: Annotated[str, typer.Option(help="Estimator, as named in the experiment.")],
+    run: Annotated[int, typer.Option(help="Run number, from 0.")],
+    condition: Annotated[
+        str | None, typer.Option(help="Condition; the problem's first if not given.")
+    ] = None,
+) -> None:
+    """Simulate one run again: error, sigma, innovations, and what was counted against it."""
+    from flyoff import api
+
+    found, table, figure = api.inspect(folder, problem, estimator, run, condition)
+    print(f"{problem}, {found.cell.condition.name}, {estimator}, run {run}:")
+    for verdict in found.verdicts:
+        print(f"  {verdict}")
+    windows = [name for name, _, _ in found.cell.problem.windows]
+    for q in found.cell.problem.problem.quantities:
+        sizes = (found.scores[f"{w}/{q.name}/rms"] * q.shown_factor for w in windows)
+        shown = ", ".join(f"{v:.4g} in `{w}`" for v, w in zip(sizes, windows, strict=True))
+        print(f"  {q.name} rms [{q.shown_unit}]: {shown}")
+    print(f"  written: {table}, {figure}")
 
 
 def _console(stderr: bool = False) -> Any:
@@ -110,29 +221,30 @@ def _console(stderr: bool = False) -> Any:
     return console
 
 
-def _run_with_progress(experiment: Experiment, out: Path | None, jobs: int | None) -> Study:
-    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
-
-    from flyoff import api
+@contextlib.contextmanager
+def _progress() -> Iterator[Progress]:
+    """A progress bar on a terminal; silence in a pipe."""
+    from rich.progress import BarColumn, TextColumn, TimeElapsedColumn
+    from rich.progress import Progress as Bars
 
     console = _console(stderr=True)
     labels = {"runs": "blocks of runs", "timing": "timing pass", "figures": "figures"}
-    with Progress(
+    with Bars(
         TextColumn("{task.description:15}"),
         BarColumn(bar_width=32),
         TextColumn("{task.completed:.0f}/{task.total:.0f}"),
         TimeElapsedColumn(),
         console=console,
         disable=not console.is_terminal,
-    ) as progress:
+    ) as bars:
         tasks: dict[str, Any] = {}
 
         def advance(what: str, done: int, total: int) -> None:
             if what not in tasks:
-                tasks[what] = progress.add_task(labels[what], total=total)
-            progress.update(tasks[what], completed=done, total=total)
+                tasks[what] = bars.add_task(labels[what], total=total)
+            bars.update(tasks[what], completed=done, total=total)
 
-        return api.run(experiment, out=out, jobs=jobs, progress=advance)
+        yield advance
 
 
 def _print_study(study: Study) -> None:

@@ -125,7 +125,8 @@ def test_figures_are_drawn_for_every_condition(study):
         for condition in ("nominal", "lossy")
     )
     for file in (study.folder / "figures").iterdir():
-        pixels = np.asarray(Image.open(file).convert("L"))
+        with Image.open(file) as picture:
+            pixels = np.asarray(picture.convert("L"))
         assert min(pixels.shape) > 200
         assert (pixels < 100).mean() > 0.002, f"{file.name} is blank"
 

@@ -93,7 +93,7 @@ class _LinearisedFilter:
         self, belief: GaussianBelief, sensor: Sensor, z: Array, u: Array
     ) -> tuple[GaussianBelief, Innovation]:
         space, p = self.model.space, self.model.parameters.astype(self.dtype, copy=False)
-        x, cov = belief.mean, belief.cov
+        x, cov, z = belief.mean, belief.cov, z.astype(self.dtype, copy=False)
         predicted, h = sensor.linearise(x, u, p)
         r = sensor.covariance(x, u, p)
         missing = missing_components(z, x.shape[1])

@@ -52,6 +52,11 @@ class Particle:
     resampling: Literal["systematic"] = "systematic"
     threshold: Annotated[float, Field(strict=True, gt=0, le=1)] = 0.5
 
+    @property
+    def sampling(self) -> bool:
+        """Its numbers are random: other platforms repeat them within Monte Carlo error only."""
+        return True
+
     def suits(self, model: Model) -> str | None:
         """Only states small enough for a bootstrap filter."""
         if model.space.d > _LARGEST_STATE:

@@ -110,7 +110,7 @@ class _SigmaPointFilter:
     def update(
         self, belief: GaussianBelief, sensor: Sensor, z: Array, u: Array
     ) -> tuple[GaussianBelief, Innovation]:
-        model, fault = self.model, belief.fault
+        model, fault, z = self.model, belief.fault, z.astype(self.dtype, copy=False)
         if isinstance(belief, _PropagatedBelief):
             dev, points = belief.deviations, belief.points
         else:

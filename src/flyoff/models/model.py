@@ -470,7 +470,9 @@ def trace(spec: ModelSpec) -> Model:
     )
     if spec.linear:
         curved = [s.name for s in sensors.values() if not s.linear]
-        if jac_only.depends_on("x") or not space.flat or curved:
+        if not space.flat:
+            raise ModelError(f"declared linear, but {space!r} holds an angle or a rotation")
+        if jac_only.depends_on("x") or curved:
             what = f"sensor `{curved[0]}`" if curved else f"`{spec.transition.__name__}`"
             raise ModelError(f"declared linear, but the Jacobian of {what} depends on the state")
     with np.errstate(all="ignore"):

@@ -201,9 +201,10 @@ class StateSpace:
     ) -> tuple[Array, Array]:
         """Weighted mean on the manifold, taken in the tangent space of a reference point.
 
-        One pass is exact for vectors and angles. On rotations its error is of fourth order in the
-        spread where the reference is the image of the centre; a reference far from the mean wants
-        more passes. Their number is fixed, so that bits do not depend on how runs are batched.
+        One pass is exact for vectors, and for angles within half a turn of the reference. On
+        rotations its error is of fourth order in the spread where the reference is the image of
+        the centre; a reference far from the mean wants more passes. Their number is fixed, so that
+        bits do not depend on how runs are batched.
 
         Parameters
         ----------
@@ -218,7 +219,7 @@ class StateSpace:
         """
         spec = "j,djm->dm" if weights.ndim == 1 else "jm,djm->dm"
         mean = about
-        for _ in range(passes if self.has_rotation else 1):
+        for _ in range(1 if self.flat else passes):
             dev = self.local(mean[:, None], points)
             step = np.einsum(spec, weights, dev)
             mean = self.retract(mean, step)

@@ -15,12 +15,13 @@ import matplotlib.pyplot as plt
 import seaborn as sns
 from matplotlib.figure import Figure
 
+from flyoff.checks.inspection import Inspection
 from flyoff.evidence.intervals import nees_band
 from flyoff.study.config import ProblemEntry
 from flyoff.study.run import Study
 from flyoff.study.table import WHOLE, CellData
 
-__all__ = ["write_figures"]
+__all__ = ["write_figures", "write_inspection"]
 
 # colour-blind safe (P. Tol, "Colour schemes", SRON technical note, 2021: the muted scheme), and
 # never colour alone: a marker and a line style each
@@ -33,19 +34,22 @@ _LINES = ("-", "--", "-.", ":", (0, (5, 1)), (0, (3, 1, 1, 1, 1, 1)))
 _INK = "#222222"
 
 
+def _style() -> dict[str, Any]:
+    return {
+        "font.size": 8.5, "axes.titlesize": 9, "axes.labelsize": 8.5, "legend.fontsize": 8.5,
+        "axes.edgecolor": "#888888", "axes.linewidth": 0.7, "text.color": _INK,
+        "axes.labelcolor": _INK, "xtick.color": _INK, "ytick.color": _INK,
+        "grid.color": "#e3e3e3", "grid.linewidth": 0.6, "savefig.dpi": 130,
+    }  # fmt: skip
+
+
 def write_figures(study: Study, folder: Path) -> Iterator[Path]:
     """Three figures a condition: errors with +-3 sigma, NEES over time, accuracy against cost.
 
     Yields each file, named ``<what>-<condition>.png``, when it is written.
     """
     folder.mkdir(parents=True, exist_ok=True)
-    style = {
-        "font.size": 8.5, "axes.titlesize": 9, "axes.labelsize": 8.5, "legend.fontsize": 8.5,
-        "axes.edgecolor": "#888888", "axes.linewidth": 0.7, "text.color": _INK,
-        "axes.labelcolor": _INK, "xtick.color": _INK, "ytick.color": _INK,
-        "grid.color": "#e3e3e3", "grid.linewidth": 0.6, "savefig.dpi": 130,
-    }  # fmt: skip
-    with sns.axes_style("whitegrid"), mpl.rc_context(style):
+    with sns.axes_style("whitegrid"), mpl.rc_context(_style()):
         for condition in study.experiment.conditions:
             cells = [c for c in study.cells if c.cell.condition is condition]
             if not cells:
@@ -286,3 +290,54 @@ def _accuracy_cost(study: Study, cells: list[CellData]) -> Figure:
         fontsize=10,
     )
     return figure
+
+
+def write_inspection(inspection: Inspection, file: Path) -> None:
+    """Errors within 3 sigma, NEES and innovations of one run, as one figure."""
+    table = inspection.steps
+    t = table["time [s]"].to_numpy()
+    parts = [c[6:] for c in table.columns if c.startswith("error ")]
+    sensors = list(inspection.nis_bound)
+    columns = 3
+    rows = math.ceil(len(parts) / columns)
+    extra = math.ceil((1 + len(sensors)) / columns)
+    cell, colour = inspection.cell, _COLOURS[0]
+    with sns.axes_style("whitegrid"), mpl.rc_context(_style()):
+        figure, axes = plt.subplots(
+            rows + extra, columns, figsize=(10.5, 1.0 + 1.9 * (rows + extra)), squeeze=False,
+            layout="constrained",
+        )  # fmt: skip
+        flat = list(axes.ravel())
+        for ax, part in zip(flat, parts, strict=False):
+            sigma = 3 * table[f"sigma {part}"].to_numpy()
+            ax.fill_between(t, -sigma, sigma, color=colour, alpha=0.18, linewidth=0)
+            ax.plot(t, table[f"error {part}"], color=_INK, linewidth=0.9)
+            ax.set_ylabel(part)
+        below = flat[rows * columns :]
+        below[0].plot(t, table["nees/d"], color=_INK, linewidth=0.9)
+        below[0].axhspan(0.8, 1.25, color="#bbbbbb", alpha=0.55, linewidth=0)
+        below[0].set_ylabel("NEES / d")
+        if (table["nees/d"] > 0).any():
+            below[0].set_yscale("log")
+        for ax, name in zip(below[1:], sensors, strict=False):
+            ax.plot(
+                t, table[f"nis {name}"], color=_COLOURS[1], marker=".", markersize=2.5,
+                linestyle="none",
+            )  # fmt: skip
+            ax.axhline(inspection.nis_bound[name], color="#777777", linewidth=0.8, linestyle="--")
+            ax.set_ylabel(f"NIS {name}\n(dashed: 99.9 %)")
+            if (table[f"nis {name}"] > 0).any():
+                ax.set_yscale("log")
+        for ax in (*flat[len(parts) : rows * columns], *below[1 + len(sensors) :]):
+            ax.axis("off")
+        for ax in flat:
+            ax.set_xlim(0, t[-1])
+            ax.set_xlabel("time [s]", labelpad=1)
+        figure.suptitle(
+            f"{cell.problem.name}, {cell.condition.name}, {cell.estimator.name}, run "
+            f"{inspection.run}: error (dark) within 3 sigma (shaded)\n"
+            + "; ".join(inspection.verdicts),
+            fontsize=10,
+        )
+        figure.savefig(file, metadata={"Software": "flyoff"})
+        plt.close(figure)

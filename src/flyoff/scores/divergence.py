@@ -66,7 +66,8 @@ class LostRuns(PlainScore):
             within = held(~beyond, hold)
             # the hold may end after converge_by, it must begin before
             entered = within[: min(by + hold - 1, context.steps)]
-            settled = np.where(entered.any(axis=0), np.argmax(entered, axis=0) - hold + 2, -1)
+            first = np.argmax(entered, axis=0) - hold + 2
+            settled = np.where(entered.any(axis=0) & ~failed, first, -1)
             never = ~failed & (settled < 0)
             away = held(beyond[by - 1 :], hold).any(axis=0)
             diverged = ~failed & ~never & away

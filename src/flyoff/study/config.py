@@ -116,6 +116,7 @@ class Experiment:
     estimators: tuple[Entry, ...]
     source: bytes
     file: str
+    only: tuple[str, ...] = ()
 
 
 def load_experiment(path: Path) -> Experiment:
@@ -174,7 +175,7 @@ def select(experiment: Experiment, only: Sequence[str]) -> Experiment:
                 f"--only {name}: no problem, condition or estimator of that name"
                 f"{nearest(name, known)}"
             )
-    return dataclasses.replace(experiment, **kept)
+    return dataclasses.replace(experiment, **kept, only=tuple(only))
 
 
 class _Check:

@@ -143,6 +143,7 @@ def _manifest(experiment: Experiment, plan: Any) -> dict[str, Any]:
         "experiment": experiment.name,
         "purpose": experiment.purpose,
         "seed": experiment.seed,
+        "only": list(experiment.only),
         "config": hashlib.sha256(experiment.source).hexdigest(),
         "source": source_digest(),
         "environment": environment(),
