@@ -28,6 +28,7 @@ import numpy as np
 
 from flyoff.errors import UserError, nearest
 from flyoff.estimators.contract import Estimator, Fault, Filter, Innovation, Weighted, moments
+from flyoff.estimators.one_run import OneRun
 from flyoff.filtering import Step, run_filter
 from flyoff.models.model import Model, ModelSpec, Sensor, SensorSpec, trace
 from flyoff.models.priors import GaussianPrior
@@ -337,7 +338,7 @@ def _turned(q: Array) -> Array:
 @cache
 def _attitude(turned: bool) -> Model:
     """Attitude and gyro bias, two reference directions read in turn; or all in a turned world."""
-    space = StateSpace(Rotation("attitude"), Vector("bias", 3, "rad/s", 0.01))
+    space = StateSpace(Rotation("attitude"), Vector("gyro_bias", 3, "rad/s", 0.01))
     rate = StateSpace(Vector("rate", 3, "rad/s", 1.0))
     noise_space = StateSpace(Vector("angle", 3, "rad", 1e-2), Vector("bias", 3, "rad/s", 1e-3))
     seen = StateSpace(Vector("direction", 3))
@@ -346,8 +347,9 @@ def _attitude(turned: bool) -> Model:
         references = tuple(algebra.rotate(_TURN, r) for r in references)  # type: ignore[assignment]
 
     def turn(x: Any, u: Any, w: Any, p: Any, dt: Any) -> Any:
-        angle = tuple((r - b) * dt + e for r, b, e in zip(u.rate, x.bias, w.angle, strict=True))
-        bias = tuple(b + e for b, e in zip(x.bias, w.bias, strict=True))
+        parts = zip(u.rate, x.gyro_bias, w.angle, strict=True)
+        angle = tuple((r - b) * dt + e for r, b, e in parts)
+        bias = tuple(b + e for b, e in zip(x.gyro_bias, w.bias, strict=True))
         return algebra.quat_mul(x.attitude, algebra.quat_exp(angle)), bias
 
     def noise(p: Any, dt: Any) -> Any:
@@ -929,6 +931,8 @@ def _picklable(estimator: Estimator) -> str:
 
 @promise("own-precision", "A filter bound to single precision holds nothing in double.")
 def _own_precision(estimator: Estimator) -> str:
+    if isinstance(estimator, OneRun):
+        raise _NotApplicable("filters written for one run work in double")
     worlds = _suited(estimator, *_EVERYWHERE)
     single = np.dtype(np.float32)
     for name, world in worlds.items():
