@@ -187,6 +187,50 @@ def vet(
 
 
 @app.command()
+def catalogue(
+    markdown: Annotated[bool, typer.Option("--markdown", help="As Markdown.")] = False,
+    schema: Annotated[
+        bool, typer.Option("--schema", help="JSON Schema of experiment files, for editors.")
+    ] = False,
+) -> None:
+    """List estimators, point rules, problems, conditions and scores with their options."""
+    from flyoff.study import catalogue as listing
+
+    if schema:
+        import json
+
+        print(json.dumps(listing.experiment_schema(), indent=1))
+        return
+    if markdown:
+        print(listing.markdown())
+        return
+    from rich.table import Table
+
+    console = _console()
+    items = listing.catalogue()
+    for kind, title in listing.KINDS.items():
+        table = Table(title=title, title_justify="left", title_style="bold", box=_box())
+        for head in ("name", "purpose and options"):
+            table.add_column(head, no_wrap=head == "name")
+        for item in items:
+            if item.kind == kind:
+                table.add_row(item.name, _described(item), end_section=True)
+        console.print(table)
+
+
+def _described(item: Any) -> str:
+    lines = [item.purpose]
+    for o in item.options:
+        unit = f" {o.unit}" if o.unit else ""
+        lines.append(f"  {o.name}: {o.default}{unit}" + (f" ({o.rule})" if o.rule else ""))
+    if item.rows:
+        lines.append("  rows: " + ", ".join(item.rows))
+    if item.cites:
+        lines.append(f"  {item.cites}")
+    return "\n".join(lines)
+
+
+@app.command()
 def inspect(
     folder: Annotated[Path, typer.Argument(help="A results folder.")],
     problem: Annotated[str, typer.Option(help="Problem, as named in the experiment.")],

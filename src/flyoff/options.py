@@ -120,6 +120,8 @@ class Unit:
     def __get_pydantic_json_schema__(self, schema: Any, handler: Any) -> dict[str, Any]:
         out: dict[str, Any] = handler(schema)
         out["unit"] = self.unit
+        if "type" in out:  # in a file it is text with a unit
+            out["type"] = ["number", "string"]
         return out
 
 

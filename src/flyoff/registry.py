@@ -16,7 +16,7 @@ from typing import TypeVar
 
 from flyoff.errors import UserError, nearest
 
-__all__ = ["discover", "lookup", "names", "register"]
+__all__ = ["citation", "discover", "lookup", "names", "register"]
 
 # Where each kind lives. Dynamic imports: the registry itself depends on nothing above it.
 _HOMES = {
@@ -28,13 +28,14 @@ _HOMES = {
 }
 
 _known: dict[str, dict[str, type]] = {kind: {} for kind in _HOMES}
+_cited: dict[tuple[str, str], str] = {}
 _discovered: set[str] = set()
 
 T = TypeVar("T", bound=type)
 
 
-def register(kind: str, name: str) -> Callable[[T], T]:
-    """Class decorator: make a class known under `name`.
+def register(kind: str, name: str, cites: str = "") -> Callable[[T], T]:
+    """Class decorator: make a class known under `name`, with the publication it follows.
 
     Raises
     ------
@@ -49,6 +50,7 @@ def register(kind: str, name: str) -> Callable[[T], T]:
         ):
             raise ValueError(f"{kind} `{name}` is already defined by {other.__module__}")
         _known[kind][name] = cls
+        _cited[kind, name] = cites
         return cls
 
     return add
@@ -66,6 +68,11 @@ def discover(kind: str) -> dict[str, type]:
         for entry in importlib.metadata.entry_points(group=f"flyoff.{kind}"):
             register(kind, entry.name)(entry.load())
     return dict(sorted(_known[kind].items()))
+
+
+def citation(kind: str, name: str) -> str:
+    """The publication a registered class follows; empty if it names none."""
+    return _cited.get((kind, name), "")
 
 
 def names(kind: str) -> list[str]:

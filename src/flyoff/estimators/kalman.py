@@ -28,7 +28,11 @@ from flyoff.registry import register
 __all__ = ["Kalman"]
 
 
-@register("estimator", "kalman")
+@register(
+    "estimator",
+    "kalman",
+    cites="R. E. Kalman, J. Basic Eng. 82:35-45, 1960",
+)
 @options
 class Kalman:
     """Kalman filter for linear models: the exact posterior, as a reference."""

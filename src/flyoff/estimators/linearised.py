@@ -50,7 +50,13 @@ def gaussian_start(prior: Prior, dtype: Any) -> GaussianBelief:
     return GaussianBelief(0, np.zeros(mean.shape[1], np.uint8), mean, cov)
 
 
-@register("estimator", "linearised")
+@register(
+    "estimator",
+    "linearised",
+    cites=(
+        "A. H. Jazwinski, 'Stochastic Processes and Filtering Theory', Academic Press 1970, ch. 8"
+    ),
+)
 @options
 class Linearised:
     """Extended Kalman filter: first-order linearisation with exact sparse Jacobians.

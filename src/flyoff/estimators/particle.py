@@ -32,7 +32,11 @@ _LARGEST_STATE = 6  # a bootstrap filter needs a number of particles exponential
 _IN_FLIGHT = 16_000  # runs x particles that stay in cache
 
 
-@register("estimator", "particle")
+@register(
+    "estimator",
+    "particle",
+    cites="N. Gordon, D. Salmond, A. Smith, IEE Proc. F 140(2):107-113, 1993",
+)
 @options
 class Particle:
     """Bootstrap particle filter, for up to six error states.

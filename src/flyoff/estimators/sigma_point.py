@@ -32,7 +32,11 @@ from flyoff.registry import register
 __all__ = ["SigmaPoint"]
 
 
-@register("estimator", "sigma-point")
+@register(
+    "estimator",
+    "sigma-point",
+    cites="S. Julier, J. Uhlmann, Proc. IEEE 92(3):401-422, 2004",
+)
 @options
 class SigmaPoint:
     """Sigma-point (unscented, cubature) Kalman filter with additive process noise.

@@ -39,7 +39,14 @@ MAGNETOMETER = StateSpace(Vector("field", 3, "T"))
 FIELD = (19.97e-6, 1.05e-6, 44.0e-6)
 
 
-@register("problem", "body-attitude")
+@register(
+    "problem",
+    "body-attitude",
+    cites=(
+        "E. J. Lefferts, F. L. Markley, M. D. Shuster, J. Guid. Control Dyn. "
+        "5(5):417-429, 1982; P. Martin, E. Salaun, Proc. ICRA 2010"
+    ),
+)
 @options
 class BodyAttitude(SimulatedProblem):
     """Multirotor attitude from gyro, accelerometer, magnetometer in a flown 20 s history."""

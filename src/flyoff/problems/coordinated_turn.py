@@ -32,7 +32,14 @@ RADAR = StateSpace(Vector("range", 1, "m"), Angle("bearing"))
 _DEG = np.pi / 180
 
 
-@register("problem", "coordinated-turn")
+@register(
+    "problem",
+    "coordinated-turn",
+    cites=(
+        "I. Arasaratnam, S. Haykin, IEEE Trans. Automat. Contr. 54(6):1254-1269, 2009, "
+        "section VII (parameters from memory)"
+    ),
+)
 @options
 class CoordinatedTurn(SimulatedProblem):
     """An aircraft in a turn of unknown rate, radar range and bearing; 5 states, 200 steps."""

@@ -29,7 +29,14 @@ FIX = StateSpace(Vector("fix", 2, "m"))
 _START = np.array([0.0, 0.0, 3.0, -1.0])
 
 
-@register("problem", "linear-tracking")
+@register(
+    "problem",
+    "linear-tracking",
+    cites=(
+        "Y. Bar-Shalom, X. R. Li, T. Kirubarajan, 'Estimation with Applications to "
+        "Tracking and Navigation', Wiley 2001, ch. 6"
+    ),
+)
 @options
 class LinearTracking(SimulatedProblem):
     """A drifting balloon, position fixes with missing components; the Kalman filter is exact."""

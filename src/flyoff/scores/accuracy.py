@@ -54,7 +54,11 @@ class ErrorTrack:
         return self.direct
 
 
-@register("score", "accuracy")
+@register(
+    "score",
+    "accuracy",
+    cites="H. A. David, H. N. Nagaraja, 'Order Statistics', Wiley 2003, section 7.1 (intervals)",
+)
 class Accuracy(PlainScore):
     """rms, quantiles, maximum and a histogram of each error magnitude."""
 

@@ -92,7 +92,14 @@ class ConsistencyTrack:
             self.inside[name][:, row] = np.where(good, share, np.float32(np.nan))
 
 
-@register("score", "consistency")
+@register(
+    "score",
+    "consistency",
+    cites=(
+        "Y. Bar-Shalom, X. R. Li, T. Kirubarajan, 'Estimation with Applications to "
+        "Tracking and Navigation', Wiley 2001, section 5.4"
+    ),
+)
 class Consistency(PlainScore):
     """NEES joint and by block, NIS by sensor, containment."""
 

@@ -25,7 +25,11 @@ from flyoff.scores.contract import Context, Divergence, PlainScore, Statistic, h
 __all__ = ["LostRuns"]
 
 
-@register("score", "lost-runs")
+@register(
+    "score",
+    "lost-runs",
+    cites="C. Clopper, E. Pearson, Biometrika 26:404-413, 1934 (intervals)",
+)
 class LostRuns(PlainScore):
     """Failed, diverged, never-converged and overconfident runs."""
 

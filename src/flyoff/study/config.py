@@ -18,13 +18,13 @@ from flyoff.study.yaml_tree import Path_, Tree, read_yaml
 
 __all__ = ["Entry", "Experiment", "ProblemEntry", "load_experiment", "select"]
 
-_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}\Z")
+NAME_PATTERN = r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$"
 _LATER = {
     "airframe", "sweeps", "requirements", "weights", "tuning", "replicates", "precision",
     "parameterisation", "scenario",
 }  # fmt: skip
 
-Name = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$")]
+Name = Annotated[str, Field(pattern=NAME_PATTERN)]
 Seconds = Annotated[Positive, Unit("s")]
 Only = list[Name]
 

@@ -12,7 +12,11 @@ from flyoff.registry import register
 __all__ = ["Cubature"]
 
 
-@register("point-rule", "cubature")
+@register(
+    "point-rule",
+    "cubature",
+    cites="I. Arasaratnam, S. Haykin, IEEE Trans. Automat. Contr. 54(6):1254-1269, 2009",
+)
 @options
 class Cubature:
     """Third-degree spherical-radial rule (I. Arasaratnam, S. Haykin, IEEE TAC 54(6), 2009)."""

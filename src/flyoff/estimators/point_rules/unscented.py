@@ -15,7 +15,11 @@ from flyoff.registry import register
 __all__ = ["Scaled", "Symmetric"]
 
 
-@register("point-rule", "scaled")
+@register(
+    "point-rule",
+    "scaled",
+    cites="S. Julier, 'The scaled unscented transformation', Proc. ACC 2002",
+)
 @options
 class Scaled:
     """Scaled unscented set (S. Julier, "The scaled unscented transformation", Proc. ACC 2002).
@@ -41,7 +45,13 @@ class Scaled:
         return PointSet(x, w, cov, 3, 0)
 
 
-@register("point-rule", "symmetric")
+@register(
+    "point-rule",
+    "symmetric",
+    cites=(
+        "S. Julier, J. Uhlmann, H. Durrant-Whyte, IEEE Trans. Automat. Contr. 45(3):477-482, 2000"
+    ),
+)
 @options
 class Symmetric:
     """Symmetric unscented set (S. Julier, J. Uhlmann, H. Durrant-Whyte, IEEE TAC 45(3), 2000).

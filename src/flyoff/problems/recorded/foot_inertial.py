@@ -45,7 +45,14 @@ ZERO_VELOCITY = StateSpace(Vector("velocity", 3, "m/s"))
 GRAVITY = foot_walk_data.GRAVITY
 
 
-@register("problem", "foot-inertial")
+@register(
+    "problem",
+    "foot-inertial",
+    cites=(
+        "E. Foxlin, IEEE Comput. Graph. Appl. 25(6):38-46, 2005; I. Skog et al., IEEE "
+        "Trans. Biomed. Eng. 57(11):2657-2666, 2010"
+    ),
+)
 @options
 class FootInertial:
     """Recorded walk: shoe-mounted inertial sensor, zero velocity in stance, markers as truth."""
