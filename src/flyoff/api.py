@@ -121,7 +121,7 @@ def run(
     out : results folder; ``results/<experiment>`` below the current folder by default
     jobs : worker processes; one a core by default
     progress : called with (what, done, total)
-    figures : whether to draw them
+    figures : whether to draw them, and the page that shows them
     with_files : Python files with the user's own estimators
 
     Returns
@@ -143,9 +143,13 @@ def run(
     write_atomically(folder / "tables.md", markdown(study).encode())
     if figures:
         from flyoff.report.figures import write_figures
+        from flyoff.report.page import page
 
         total = 3 * len({c.cell.condition.name for c in study.cells})
-        for done, _ in enumerate(write_figures(study, folder / "figures"), 1):
+        drawn = []
+        for file in write_figures(study, folder / "figures"):
+            drawn.append(file)
             if progress is not None:
-                progress("figures", done, total)
+                progress("figures", len(drawn), total)
+        write_atomically(folder / "report.html", page(study, drawn).encode())
     return study

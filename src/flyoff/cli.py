@@ -312,7 +312,9 @@ def _print_study(study: Study) -> None:
         console.print(f"{study.repaired} damaged block(s) were found and computed again")
     for caution in CAUTIONS:
         console.print(f"! {caution}")
-    console.print(f"\nresults in {study.folder}: table.csv, tables.md, manifest.json, figures/")
+    console.print(
+        f"\nresults in {study.folder}: report.html, table.csv, tables.md, manifest.json, figures/"
+    )
 
 
 def _box() -> Any:

@@ -134,8 +134,8 @@ def experiment_schema() -> dict[str, Any]:
     problems = []
     for name, cls in discover("problem").items():
         parameters = _class_schema(cls, defs)
-        own = {"kind": {"const": name}, "parameters": parameters}
-        problems.append({"properties": own, "required": ["kind"]})
+        fits = {"kind": {"const": name}, "parameters": parameters}
+        problems.append({"properties": fits, "required": ["kind"]})
     problem = defs["ProblemSpec"]
     problem["properties"]["kind"] = {"enum": list(discover("problem"))}
     problem["oneOf"] = problems

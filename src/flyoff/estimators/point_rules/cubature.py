@@ -19,7 +19,7 @@ __all__ = ["Cubature"]
 )
 @options
 class Cubature:
-    """Third-degree spherical-radial rule (I. Arasaratnam, S. Haykin, IEEE TAC 54(6), 2009)."""
+    """Third-degree spherical-radial cubature: equal weights, no centre."""
 
     rule: Literal["cubature"] = "cubature"
 

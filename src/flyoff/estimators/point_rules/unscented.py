@@ -22,7 +22,7 @@ __all__ = ["Scaled", "Symmetric"]
 )
 @options
 class Scaled:
-    """Scaled unscented set (S. Julier, "The scaled unscented transformation", Proc. ACC 2002).
+    """Scaled unscented set: spread and centre weight set apart.
 
     Attributes
     ----------
@@ -54,7 +54,7 @@ class Scaled:
 )
 @options
 class Symmetric:
-    """Symmetric unscented set (S. Julier, J. Uhlmann, H. Durrant-Whyte, IEEE TAC 45(3), 2000).
+    """Symmetric unscented set with a weight on the centre.
 
     Attributes
     ----------
