@@ -103,56 +103,51 @@ def _shown_component(problem: ProblemEntry) -> tuple[int, str, str, float]:
 
 def _errors(study: Study, cells: list[CellData]) -> Figure:
     groups = _by_problem(study, cells)
-    names = [e.name for e in study.experiment.estimators]
-    used = [n for n in names if any(c.cell.estimator.name == n for c in cells)]
+    columns = max(len(own) for _, own in groups)
     figure, axes = plt.subplots(
-        len(groups), len(used), figsize=(1.0 + 2.1 * len(used), 0.9 + 1.75 * len(groups)),
+        len(groups), columns, figsize=(max(6.0, 1.0 + 2.1 * columns), 0.9 + 1.95 * len(groups)),
         squeeze=False, layout="constrained",
     )  # fmt: skip
     for row, (problem, own) in enumerate(groups):
         index, component, unit, factor = _shown_component(problem)
-        by_name = {c.cell.estimator.name: c for c in own}
-        limit = 0.0
-        for c in own:
-            sigma = c.traces["sigma"][:, index] * factor
-            error = np.abs(c.traces["error"][:, index] * factor)
-            # the settled part decides the scale; a lost run leaves the panel
-            tail = slice(len(sigma) // 5, None)
-            seen = np.concatenate([3 * sigma[tail], np.minimum(error, 9 * sigma)[tail]])
-            seen = seen[np.isfinite(seen)]
-            if len(seen):
-                limit = max(limit, float(np.quantile(seen, 0.99)))
-        for column, name in enumerate(used):
+        limit = max(_settled_range(c, index) for c in own) * factor
+        for column, c in enumerate(own):
             ax = axes[row, column]
-            shown = by_name.get(name)
-            if shown is None:
-                ax.axis("off")
-                if row == 0:
-                    ax.set_title(name)
-                continue
-            t = problem.problem.step * np.arange(1, len(shown.traces["sigma"]) + 1)
-            sigma = 3 * shown.traces["sigma"][:, index] * factor
+            name = c.cell.estimator.name
+            t = problem.problem.step * np.arange(1, len(c.traces["sigma"]) + 1)
+            sigma = 3 * c.traces["sigma"][:, index] * factor
             look = _line(study, name)
             ax.fill_between(t, -sigma, sigma, color=look["color"], alpha=0.16, linewidth=0)
             ax.plot(t, sigma, color=look["color"], linewidth=0.7)
             ax.plot(t, -sigma, color=look["color"], linewidth=0.7)
-            ax.plot(t, shown.traces["error"][:, index] * factor, color=_INK, linewidth=0.8)
+            ax.plot(t, c.traces["error"][:, index] * factor, color=_INK, linewidth=0.8)
             if limit > 0:
                 ax.set_ylim(-1.15 * limit, 1.15 * limit)
             ax.set_xlim(0, t[-1])
-            if row == 0:
-                ax.set_title(name)
+            ax.set_title(name if np.isfinite(sigma).any() else f"{name} (no covariance)")
             if column == 0:
                 ax.set_ylabel(f"{problem.name}\n{component} [{unit}]")
             else:
                 ax.tick_params(labelleft=False)
             ax.set_xlabel("time [s]", labelpad=1)
+        for ax in axes[row, len(own) :]:
+            ax.axis("off")
     condition = cells[0].cell.condition.name
     figure.suptitle(
         f"Error of run 0 (dark line) within the filter's own ±3 sigma (shaded): {condition}",
         fontsize=10,
     )
     return figure
+
+
+def _settled_range(c: CellData, index: int) -> float:
+    """Scale of a panel from its settled part; a lost run may leave the panel."""
+    sigma, error = 3 * c.traces["sigma"][:, index], np.abs(c.traces["error"][:, index])
+    tail = slice(len(sigma) // 5, None)
+    capped = np.fmin(error, 3 * sigma)
+    seen = np.concatenate([sigma[tail], capped[tail]])
+    seen = seen[np.isfinite(seen)]
+    return float(np.quantile(seen, 0.99)) if len(seen) else 0.0
 
 
 def _grid(count: int, legend: bool = True) -> tuple[Figure, list[Any]]:
@@ -173,10 +168,10 @@ def _plain_ticks(axis: Any) -> None:
     low, high = sorted(axis.get_view_interval())
     plain = mpl.ticker.FuncFormatter(lambda v, _: f"{v:g}")
     axis.set_major_formatter(plain)
-    wide = high / max(low, 1e-300) > 30
+    wide = high / max(low, 1e-300) > 60
     axis.set_minor_formatter(mpl.ticker.NullFormatter() if wide else plain)
     if not wide:
-        axis.set_minor_locator(mpl.ticker.LogLocator(subs=(2, 5)))
+        axis.set_minor_locator(mpl.ticker.LogLocator(subs=(2, 5), numticks=20))
 
 
 def _legend(figure: Figure, axes: list[Any]) -> None:

@@ -63,11 +63,11 @@ class ConsistencyTrack:
             nis = np.where(np.isnan(old), 0, old) + fresh
             self.nis[name][row] = np.where(good, nis, old)
             self.count[name][row] += np.where(good, innovation.count, 0)
-        if step.cov is None or step.factor is None or not self.blocks[""]:
-            return
         space = self.context.model.space
         e = space.local(step.mean, step.truth)
         self.example[0, row] = np.where(step.alive[0], e[:, 0], np.nan)
+        if step.cov is None or step.factor is None or not self.blocks[""]:
+            return
         self.example[1, row] = np.sqrt(step.cov[range(space.d), range(space.d), 0])
         judged = self.blocks[""]
         good = step.alive & np.isfinite(e[judged]).all(axis=0)
