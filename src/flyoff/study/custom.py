@@ -9,12 +9,13 @@ from __future__ import annotations
 import hashlib
 import importlib.util
 import sys
+from collections.abc import Iterable
 from pathlib import Path
 from typing import Any
 
 from flyoff.errors import UserError
 
-__all__ = ["digest_of", "is_custom", "load_user_file", "loaded_files"]
+__all__ = ["digest_of", "files_of", "is_custom", "load_user_file"]
 
 _PREFIX = "flyoff_with_"
 _loaded: dict[str, tuple[Path, str]] = {}
@@ -65,9 +66,10 @@ def _line(why: BaseException, path: Path) -> str:
     return line
 
 
-def loaded_files() -> list[Path]:
-    """Files loaded so far."""
-    return [path for path, _ in _loaded.values()]
+def files_of(things: Iterable[Any]) -> list[Path]:
+    """The user's files that the classes of these objects come from."""
+    modules = dict.fromkeys(type(thing).__module__ for thing in things)
+    return [_loaded[name][0] for name in modules if name in _loaded]
 
 
 def is_custom(thing: Any) -> bool:

@@ -23,7 +23,7 @@ from flyoff.numerics.spaces import Array
 from flyoff.numerics.streams import Streams
 from flyoff.recordings import Recording
 from flyoff.study.config import Entry, Experiment, ProblemEntry
-from flyoff.study.custom import is_custom, load_user_file, loaded_files
+from flyoff.study.custom import files_of, is_custom, load_user_file
 from flyoff.study.plan import Block, Unit, cells, make_context, make_recording, make_scores
 from flyoff.study.store import Store
 
@@ -180,7 +180,7 @@ def run_units(
         min(jobs, len(work)),
         mp_context=spawn,
         initializer=_start_worker,
-        initargs=(loaded_files(),),
+        initargs=(files_of(b.cell.estimator.what for unit in work for b in unit.blocks),),
     )
     try:
         pending = [pool.submit(evaluate, unit, str(folder)) for unit in work]

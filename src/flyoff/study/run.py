@@ -16,7 +16,7 @@ import pandas as pd
 
 from flyoff.errors import UserError
 from flyoff.study.config import Experiment
-from flyoff.study.custom import digest_of, loaded_files
+from flyoff.study.custom import digest_of, files_of
 from flyoff.study.execute import run_units, time_cells
 from flyoff.study.plan import Block, blocks, cells, units
 from flyoff.study.store import Store, canonical, content_key, environment, source_digest
@@ -162,7 +162,10 @@ def _manifest(experiment: Experiment, plan: Any) -> dict[str, Any]:
         },
         "conditions": {c.name: canonical(c.what) for c in experiment.conditions},
         "estimators": {e.name: canonical(e.what) for e in experiment.estimators},
-        "user files": {f.name: hashlib.sha256(f.read_bytes()).hexdigest() for f in loaded_files()},
+        "user files": {
+            f.name: hashlib.sha256(f.read_bytes()).hexdigest()
+            for f in files_of(e.what for e in experiment.estimators)
+        },
         "blocks": [
             {
                 "problem": cell.problem.name,
@@ -179,7 +182,7 @@ def _write(
     folder: Path, experiment: Experiment, table: pd.DataFrame, manifest: dict[str, Any]
 ) -> None:
     write_atomically(folder / "config.yaml", experiment.source)
-    for file in loaded_files():
+    for file in files_of(e.what for e in experiment.estimators):
         # whoever reproduces the table needs the code that made it
         write_atomically(folder / file.name, file.read_bytes())
     write_atomically(folder / "table.csv", write_csv(table))
