@@ -151,7 +151,7 @@ def _verdicts(found: dict[str, Any], dt: float) -> list[str]:
     if found.get("all/runs/never-converged"):
         out.append("never converged within the bound in time")
     elif found.get("all/runs/settled-step", -1) > 0:
-        out.append(f"within the bound from {found['all/runs/settled-step'] * dt:g} s on")
+        out.append(f"first settled within the bound at {found['all/runs/settled-step'] * dt:g} s")
     if found.get("all/runs/overconfident"):
         out.append("overconfident: NEES beyond its 1 - 1e-6 quantile for the hold, track kept")
     return out or ["nothing was counted against this run"]
