@@ -18,36 +18,17 @@ from flyoff.estimators.contract import Weighted, moments
 from flyoff.estimators.linearised import Linearised
 from flyoff.evidence.intervals import nees_band
 from flyoff.filtering import run_filter
-from flyoff.models.model import ModelSpec, SensorSpec, trace
 from flyoff.models.priors import GaussianPrior
-from flyoff.numerics.discretise import white_acceleration
 from flyoff.numerics.spaces import StateSpace, Vector
 from flyoff.numerics.streams import Streams
 from flyoff.problems.linear_tracking import LinearTracking
 from flyoff.recordings import Recording, draw_start, simulate
 from flyoff.scores.consistency import ConsistencyTrack
 from flyoff.scores.contract import Context, Divergence
+from tests.published.constant_velocity import SPACE, constant_velocity
 
 RUNS, STEPS = 8000, 100
-SPACE = StateSpace(Vector("position", 1, "m"), Vector("velocity", 1, "m/s"))
-FIX = StateSpace(Vector("fix", 1, "m"))
 P0 = np.array([[10.0, 4.0], [4.0, 10.0]])
-
-
-def move(x, u, w, p, dt):
-    return x.position + dt * x.velocity + w.position, x.velocity + w.velocity
-
-
-def noise(p, dt):
-    return white_acceleration(0.1, dt)
-
-
-def see(x, u, p):
-    return x.position
-
-
-def fix_noise(x, u, p):
-    return ((1.0,),)
 
 
 class Innovations:
@@ -71,16 +52,7 @@ def track_of(recording: Recording, model, filter_model, watch=()) -> Consistency
 
 @pytest.fixture(scope="module")
 def model():
-    return trace(
-        ModelSpec(
-            space=SPACE,
-            transition=move,
-            noise=SPACE,
-            noise_covariance=noise,
-            sensors=(SensorSpec("fix", FIX, see, fix_noise, 1.0),),
-            linear=True,
-        )
-    )
+    return constant_velocity()
 
 
 @pytest.fixture(scope="module")

@@ -21,12 +21,10 @@ from flyoff.estimators.point_rules.cubature import Cubature
 from flyoff.estimators.point_rules.unscented import Scaled, Symmetric
 from flyoff.estimators.sigma_point import SigmaPoint
 from flyoff.filtering import run_filter
-from flyoff.models.model import ModelSpec, SensorSpec, trace
 from flyoff.models.priors import GaussianPrior
-from flyoff.numerics.discretise import white_acceleration
-from flyoff.numerics.spaces import StateSpace, Vector
 from flyoff.numerics.streams import Streams
 from flyoff.recordings import Readings, Recording
+from tests.published.constant_velocity import SPACE, constant_velocity
 
 F = np.array([[1.0, 1.0], [0.0, 1.0]])
 H = np.array([[1.0, 0.0]])
@@ -35,8 +33,6 @@ R = np.array([[1.0]])
 M0, P0 = np.array([0.0, 1.0]), 10 * np.eye(2)
 STEPS = 60
 
-SPACE = StateSpace(Vector("position", 1, "m"), Vector("velocity", 1, "m/s"))
-FIX = StateSpace(Vector("fix", 1, "m"))
 
 FILTERS = {
     "kalman": Kalman(),
@@ -48,34 +44,9 @@ FILTERS = {
 }
 
 
-def move(x, u, w, p, dt):
-    return x.position + dt * x.velocity + w.position, x.velocity + w.velocity
-
-
-def noise(p, dt):
-    return white_acceleration(0.1, dt)
-
-
-def see(x, u, p):
-    return x.position
-
-
-def fix_noise(x, u, p):
-    return ((1.0,),)
-
-
 @pytest.fixture(scope="module")
 def model():
-    return trace(
-        ModelSpec(
-            space=SPACE,
-            transition=move,
-            noise=SPACE,
-            noise_covariance=noise,
-            sensors=(SensorSpec("fix", FIX, see, fix_noise, 1.0),),
-            linear=True,
-        )
-    )
+    return constant_velocity()
 
 
 def simulated(seed: int) -> np.ndarray:
