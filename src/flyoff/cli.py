@@ -328,7 +328,7 @@ def _print_plan(experiment: Experiment, jobs: int | None) -> None:
 
     from rich.table import Table
 
-    from flyoff.study.plan import estimate
+    from flyoff.study.plan import check_memory, estimate
 
     console = _console()
     table = Table(title=f"Plan of {experiment.name}", title_justify="left", box=_box())
@@ -336,6 +336,8 @@ def _print_plan(experiment: Experiment, jobs: int | None) -> None:
         table.add_column(head)
     for head in ("runs", "steps a run", "memory [MB]", "time [s]"):
         table.add_column(head, justify="right")
+    workers = jobs or os.cpu_count() or 1
+    check_memory(experiment, workers)
     estimates = estimate(experiment)
     for e in estimates:
         c = e.cell
@@ -344,7 +346,6 @@ def _print_plan(experiment: Experiment, jobs: int | None) -> None:
             str(c.steps), f"{e.megabytes:.0f}", f"{e.seconds:.1f}",
         )  # fmt: skip
     console.print(table)
-    workers = jobs or os.cpu_count() or 1
     seconds = sum(e.seconds for e in estimates)
     steps = sum(e.cell.steps * e.cell.problem.runs for e in estimates)
     largest = max(e.megabytes for e in estimates)

@@ -149,7 +149,7 @@ Positive = Annotated[float, Field(strict=True, gt=0, allow_inf_nan=False)]
 NonNegative = Annotated[float, Field(strict=True, ge=0, allow_inf_nan=False)]
 Fraction = Annotated[float, Field(strict=True, ge=0, le=1)]
 Flag = Annotated[bool, Field(strict=True)]
-Count = Annotated[int, Field(strict=True, ge=1)]
+Count = Annotated[int, Field(strict=True, ge=1, le=1_000_000)]
 
 if TYPE_CHECKING:
 

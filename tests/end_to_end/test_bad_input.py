@@ -259,3 +259,38 @@ def test_plan_runs_nothing(small, tmp_path):
     assert not out.exists()
     assert "8 cells" in done.stdout
     assert "nothing has been run or stored" in done.stdout
+
+
+def test_sizes_that_cannot_fit_are_refused_before_anything_is_allocated(tmp_path):
+    file = tmp_path / "x.yaml"
+    big = "{kind: coordinated-turn, parameters: {steps: 1000000}}"
+    file.write_text(
+        GOOD.replace("{kind: coordinated-turn}", big).replace("runs: 4", "runs: 1000000")
+    )
+    for more in ((), ("--plan",)):
+        done = command("run", file, "--out", tmp_path / "out", "--jobs", 8, *more)
+        assert done.returncode == 2
+        assert done.stderr.startswith(f"{file}: `ekf` on `radar` needs about ")
+        assert "GB: take fewer steps, runs or particles" in done.stderr
+    assert not (tmp_path / "out").exists()
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "line"),
+    [
+        ("runs: 4", "runs: 100000000000", "4: runs: must be at most 1e+06, got 100000000000"),
+        (
+            "{family: linearised}", "{family: particle, particles: 1000000000000}",
+            "6: estimators.ekf.particles: must be at most 1e+06, got 1000000000000",
+        ),
+        (
+            "{kind: coordinated-turn}",
+            "{kind: coordinated-turn, parameters: {steps: 1000000000}}",
+            "5: problems.radar.parameters.steps: must be at most 1e+06, got 1000000000",
+        ),
+        ("runs: 4", "runs: " + "9" * 5000, "4: runs: must be a whole number, got 999999"),
+    ],
+)  # fmt: skip
+def test_absurd_numbers(tmp_path, old, new, line):
+    (got,) = messages(tmp_path, GOOD.replace(old, new))
+    assert got.startswith(line)

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
+import os
 import time
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
-import numpy as np
-
+from flyoff.errors import UserError
 from flyoff.filtering import run_filter
 from flyoff.models.model import Model
 from flyoff.numerics.streams import Streams
@@ -28,10 +28,12 @@ __all__ = [
     "Unit",
     "blocks",
     "cells",
+    "check_memory",
     "estimate",
     "make_context",
     "make_recording",
     "make_scores",
+    "megabytes",
     "units",
 ]
 
@@ -175,6 +177,46 @@ def make_scores(context: Context) -> list[Any]:
     return [cls(context) for cls in discover("score").values()]
 
 
+def megabytes(cell: Cell) -> float:
+    """Arrays that evaluating a cell holds at once: recording, error tracks, particles [MB]."""
+    problem = cell.problem.problem
+    model = problem.filter_model()
+    runs = min(cell.problem.runs, CHUNK * _CHUNKS_A_BATCH)
+    batch = max(2, min(cell.estimator.what.batch(model), runs))
+    rates = [s.space.n * min(s.rate * problem.step, 1.0) for s in model.sensors.values()]
+    recording = cell.steps * runs * (model.space.n + model.inputs.n + 2 * sum(rates))
+    blocks = 1 + len(model.space.blocks)
+    tracks = cell.steps * batch * (len(problem.quantities) + 2.5 * blocks + 2 * len(rates))
+    particles = getattr(cell.estimator.what, "particles", 0) * batch * 6 * model.space.n
+    return 8e-6 * (recording + 2 * tracks + particles)
+
+
+def check_memory(experiment: Experiment, jobs: int) -> None:
+    """Refuse what would not fit, before anything is allocated.
+
+    Raises
+    ------
+    UserError
+        Naming the largest cell, what it needs and what the machine has.
+    """
+    have = _machine_megabytes()
+    for cell in cells(experiment):
+        need = megabytes(cell) * max(1, jobs)
+        if need > 0.8 * have:
+            raise UserError(
+                f"{experiment.file}: `{cell.estimator.name}` on `{cell.problem.name}` needs about "
+                f"{need / 1000:.0f} GB in {jobs} process(es), the machine has {have / 1000:.0f} "
+                "GB: take fewer steps, runs or particles, or fewer --jobs"
+            )
+
+
+def _machine_megabytes() -> float:
+    try:
+        return os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES") / 1e6
+    except (AttributeError, ValueError, OSError):  # not POSIX
+        return 16_000.0
+
+
 @dataclass(frozen=True)
 class CellEstimate:
     """Cost of a cell before it is run."""
@@ -195,17 +237,13 @@ def estimate(experiment: Experiment, probe_steps: int = 12) -> list[CellEstimate
         streams = Streams(experiment.seed, "timing", p.name, range(max(2, runs)))
         model, recording = make_recording(p, Entry("", ()), streams)
         recording = recording.stretch(recording.steps // 2, probe_steps)
-        truth = (
-            8e-6 * np.prod(recording.truth.shape[1:]) * round(p.problem.duration / p.problem.step)
-        )
         for cell in cells(experiment):
             if cell.problem is not p:
                 continue
             seconds, batch = _probe(cell, model, recording, streams)
             per_step = seconds / recording.steps
-            scores = 8e-6 * cell.steps * batch * (len(p.problem.quantities) + 6)
             total = per_step * cell.steps * math.ceil(p.runs / batch)
-            out.append(CellEstimate(cell, total, truth + scores))
+            out.append(CellEstimate(cell, total, megabytes(cell)))
     return out
 
 

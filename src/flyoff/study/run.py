@@ -18,7 +18,7 @@ from flyoff.errors import UserError
 from flyoff.study.config import Experiment
 from flyoff.study.custom import digest_of, files_of
 from flyoff.study.execute import run_units, time_cells
-from flyoff.study.plan import Block, blocks, cells, units
+from flyoff.study.plan import Block, blocks, cells, check_memory, units
 from flyoff.study.store import Store, canonical, content_key, environment, source_digest
 from flyoff.study.table import CellData, build_table, merge_blocks, runs_frame, write_csv
 
@@ -59,6 +59,7 @@ def carry_out(
     UserError
         For a folder that cannot be written or that another run holds.
     """
+    check_memory(experiment, jobs)
     store = Store(folder)
     store.create()
     with store.lock():
