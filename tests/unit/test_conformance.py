@@ -417,12 +417,12 @@ class KeepsThePrior(Same):
 
 
 class Lopsided(Same):
-    """Updates one triangle of the covariance only."""
+    """Reports a covariance of which one triangle has been scaled."""
 
-    def update(self, belief, sensor, z, u):
-        after, innovation = super().update(belief, sensor, z, u)
-        low, old = np.tri(len(after.cov), dtype=bool)[:, :, None], belief.cov
-        return replace(after, cov=np.where(low, after.cov, old)), innovation
+    def posterior(self, belief):
+        got = super().posterior(belief)
+        low = np.tri(len(got.cov), k=-1, dtype=bool)[:, :, None]
+        return replace(got, cov=np.where(low, 0.9 * got.cov, got.cov))
 
 
 class UnknownFault(Same):

@@ -33,6 +33,9 @@ class Correction:
 
 def missing_components(z: Array, runs: int) -> Array | None:
     """Mask (m, M) of missing (NaN) components, or None if none is."""
+    total = np.add.reduce(z, axis=None)
+    if total == total:  # a sum that equals itself holds no NaN
+        return None
     gone = np.isnan(z)
     if not gone.any():
         return None

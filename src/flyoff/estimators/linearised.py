@@ -107,7 +107,8 @@ class _LinearisedFilter:
         if missing is not None:
             h = np.where(missing[:, None], self.dtype.type(0), h)
         cross = sensor.project(h, cov)
-        s = sensor.spread(cross, h) + r
+        s = sensor.spread(cross, h)
+        s += r
         c = correct(cross, s, residual, missing)
         # X = P (I - K H)', then (I - K H) X + K R K' = X - K (H X - R K'), as rank-m products
         new = linalg.t_product(cross, c.gain)
@@ -116,13 +117,16 @@ class _LinearisedFilter:
             rest = sensor.project(h, new)
             rest -= linalg.product(r, c.gain)
             new -= linalg.t_product(c.gain, rest)
-        new = space.reset(linalg.symmetrise(new), c.delta)
-        fault = combine_faults(belief.fault, ~c.ok, Fault.NOT_POSITIVE_DEFINITE)
+        # symmetric to rounding; predict and posterior make it so to the bit
+        new = space.reset(new, c.delta)
+        fault = belief.fault
+        if not c.ok.all():
+            fault = combine_faults(fault, ~c.ok, Fault.NOT_POSITIVE_DEFINITE)
         mean = space.retract(x, c.delta)
         return GaussianBelief(belief.step, fault, mean, new), c.innovation
 
     def posterior(self, belief: GaussianBelief) -> Gaussian:
-        return Gaussian(belief.mean, belief.cov)
+        return Gaussian(belief.mean, linalg.symmetrise(belief.cov))
 
     def operations(self, readings: Mapping[str, float]) -> Counts:
         d, nz = self.model.space.d, self.model.f_pattern.nonzeros

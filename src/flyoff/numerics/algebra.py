@@ -34,9 +34,9 @@ Scalar = Any
 Vec = tuple[Scalar, ...]
 
 _SMALL = 0.1  # rad: below this the series of quaternions are used, truncated under 1e-16
-_NEAR = 0.5  # rad: and here those of sinc and cosc, truncated under 1e-18
-_SINC = tuple((-1) ** n / math.factorial(2 * n + 1) for n in range(8))
-_COSC = tuple((-1) ** n / math.factorial(2 * n + 2) for n in range(8))
+_NEAR = 0.25  # rad: and here those of sinc and cosc, truncated under 1e-16
+_SINC = tuple((-1) ** n / math.factorial(2 * n + 1) for n in range(6))
+_COSC = tuple((-1) ** n / math.factorial(2 * n + 2) for n in range(6))
 
 
 def _select(cond: Scalar, a: Scalar, b: Scalar) -> Scalar:
