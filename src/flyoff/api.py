@@ -145,6 +145,8 @@ def run(
         from flyoff.report.figures import write_figures
         from flyoff.report.page import page
 
+        if (folder / "figures").exists() and not (folder / "figures").is_dir():
+            raise UserError(f"{folder / 'figures'}: is in the way, not a folder", code=1)
         total = 3 * len({c.cell.condition.name for c in study.cells})
         drawn = []
         for file in write_figures(study, folder / "figures"):

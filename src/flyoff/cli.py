@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import os
 import sys
 from collections.abc import Iterator
 from pathlib import Path
@@ -51,8 +52,9 @@ def main() -> None:
         print(
             "stopped; what is finished is stored: the same command goes on from there",
             file=sys.stderr,
+            flush=True,
         )
-        sys.exit(1)
+        os._exit(1)  # workers are gone; nothing is left to wait for
     except BrokenPipeError:
         sys.exit(1)
     except Exception as why:
@@ -99,6 +101,9 @@ def run(
     if plan:
         _print_plan(experiment, jobs)
         return
+    if only and out is None:
+        # a part must not take the place of the whole
+        out = Path("results") / "-".join([experiment.name, "only", *only])
     with _progress() as advance:
         study = api.run(experiment, out=out, jobs=jobs, progress=advance)
     _print_study(study)
@@ -117,10 +122,15 @@ def reproduce(
     for label, same in (("platform", outcome.same_platform), ("source", outcome.same_source)):
         print(f"{label}: {'as stored' if same else 'another one than stored'}")
     for rule, count in outcome.checked.items():
-        print(f"{count:6d} cells held to: {rule}")
+        held = "cells" if rule.startswith("not compared") else "cells held to:"
+        print(f"{count:6d} {held} {rule}")
     for d in outcome.differences:
         print(f"differs: {d.cell}: {d.stored:.9g} stored, {d.repeated:.9g} repeated ({d.rule})")
-    print("everything agrees" if outcome.agrees else f"{len(outcome.differences)} cells differ")
+    print(
+        "everything that was compared agrees"
+        if outcome.agrees
+        else f"{len(outcome.differences)} cells differ"
+    )
     raise typer.Exit(0 if outcome.agrees else 1)
 
 
@@ -324,8 +334,6 @@ def _box() -> Any:
 
 
 def _print_plan(experiment: Experiment, jobs: int | None) -> None:
-    import os
-
     from rich.table import Table
 
     from flyoff.study.plan import check_memory, estimate

@@ -93,7 +93,10 @@ def convert(text: str, unit: str) -> float:
     got = match[2] or "1"
     if got not in UNITS or UNITS[got][0] != dimension:
         raise ValueError(f"must have a unit of {dimension} ({', '.join(wanted)})")
-    return float(match[1]) * UNITS[got][1]
+    value = float(match[1]) * UNITS[got][1]
+    if not math.isfinite(value):
+        raise ValueError("must be a finite number")
+    return value
 
 
 @dataclass(frozen=True)
@@ -110,6 +113,10 @@ class Unit:
                 except ValueError as why:
                     raise PydanticCustomError("unit", str(why).replace("{", "{{")) from None
             from_file = (info.context or {}).get("from_file", False)
+            if from_file and not isinstance(value, int | float):
+                raise PydanticCustomError(
+                    "unit", f"must be a number with a unit of {UNITS[self.unit][0]}"
+                )
             if from_file and UNITS[self.unit][0] != "ratio" and value != 0:
                 hint = f"a unit, as in `{value} {self.unit}`"
                 raise PydanticCustomError("unit", f"needs {hint}")

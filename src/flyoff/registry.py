@@ -16,7 +16,7 @@ from typing import TypeVar
 
 from flyoff.errors import UserError, nearest
 
-__all__ = ["citation", "discover", "lookup", "names", "register"]
+__all__ = ["KINDS", "citation", "discover", "forget", "lookup", "names", "register"]
 
 # Where each kind lives. Dynamic imports: the registry itself depends on nothing above it.
 _HOMES = {
@@ -27,6 +27,7 @@ _HOMES = {
     "score": "flyoff.scores",
 }
 
+KINDS = tuple(_HOMES)
 _known: dict[str, dict[str, type]] = {kind: {} for kind in _HOMES}
 _cited: dict[tuple[str, str], str] = {}
 _discovered: set[str] = set()
@@ -68,6 +69,13 @@ def discover(kind: str) -> dict[str, type]:
         for entry in importlib.metadata.entry_points(group=f"flyoff.{kind}"):
             register(kind, entry.name)(entry.load())
     return dict(sorted(_known[kind].items()))
+
+
+def forget(module: str) -> None:
+    """Take out what a module has registered."""
+    for table in _known.values():
+        for name in [n for n, cls in table.items() if cls.__module__ == module]:
+            del table[name]
 
 
 def citation(kind: str, name: str) -> str:

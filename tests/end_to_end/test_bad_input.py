@@ -278,15 +278,15 @@ def test_sizes_that_cannot_fit_are_refused_before_anything_is_allocated(tmp_path
 @pytest.mark.parametrize(
     ("old", "new", "line"),
     [
-        ("runs: 4", "runs: 100000000000", "4: runs: must be at most 1e+06, got 100000000000"),
+        ("runs: 4", "runs: 100000000000", "4: runs: must be at most 1000000, got 100000000000"),
         (
             "{family: linearised}", "{family: particle, particles: 1000000000000}",
-            "6: estimators.ekf.particles: must be at most 1e+06, got 1000000000000",
+            "6: estimators.ekf.particles: must be at most 1000000, got 1000000000000",
         ),
         (
             "{kind: coordinated-turn}",
             "{kind: coordinated-turn, parameters: {steps: 1000000000}}",
-            "5: problems.radar.parameters.steps: must be at most 1e+06, got 1000000000",
+            "5: problems.radar.parameters.steps: must be at most 1000000, got 1000000000",
         ),
         ("runs: 4", "runs: " + "9" * 5000, "4: runs: must be a whole number, got 999999"),
     ],
@@ -294,3 +294,56 @@ def test_sizes_that_cannot_fit_are_refused_before_anything_is_allocated(tmp_path
 def test_absurd_numbers(tmp_path, old, new, line):
     (got,) = messages(tmp_path, GOOD.replace(old, new))
     assert got.startswith(line)
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "line"),
+    [
+        (
+            "{kind: coordinated-turn}",
+            "{kind: coordinated-turn, parameters: {range_sigma_m: 5, range_sigma_km: 5}}",
+            "5: problems.radar.parameters.range_sigma_km: unknown key",
+        ),
+        (
+            "{family: linearised}}", "{family: linearised, only: [b]}, }\nruns: 4",
+            "6: estimators.ekf.only: no problem `b`",
+        ),
+        ("runs: 4", "runs: 4\nconditions: {}", "6: problems.radar: no condition applies to it"),
+        (
+            "runs: 4", "runs: 4\nwindows: {w: [0.4 s, 0.6 s]}",
+            "5: windows.w: holds no step of `radar` (1 s each)",
+        ),
+        (
+            "{kind: coordinated-turn}",
+            "{kind: coordinated-turn, parameters: {range_sigma: 1e999 m}}",
+            "5: problems.radar.parameters.range_sigma: must be a finite number, got 1e999 m",
+        ),
+        (
+            "{kind: coordinated-turn}",
+            "{kind: coordinated-turn, parameters: {range_sigma: null}}",
+            "5: problems.radar.parameters.range_sigma: must be a number with a unit of length, "
+            "got nothing",
+        ),
+        (
+            "{family: linearised}",
+            "{family: sigma-point, points: {rule: scaled, alpha: 1e-300}}",
+            "6: estimators.ekf: cannot run on `radar`: ",
+        ),
+    ],
+)  # fmt: skip
+def test_what_a_second_reader_found(tmp_path, old, new, line):
+    text = GOOD.replace(old, new)
+    if text.count("runs: 4") > 1:
+        text = text[: text.rindex("runs: 4")]
+    assert messages(tmp_path, text)[0].startswith(line)
+
+
+def test_only_that_leaves_nothing(small):
+    done = command("run", small(), "--only", "radar", "--only", "kalman")
+    assert done.returncode == 2
+    assert done.stderr == "--only radar kalman: no cell of the experiment is left\n"
+
+
+def test_a_device_is_not_read():
+    done = command("run", "/dev/zero")
+    assert (done.returncode, done.stderr) == (2, "/dev/zero: is not a file\n")

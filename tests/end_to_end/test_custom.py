@@ -229,3 +229,29 @@ def test_files_that_do_not_import(tmp_path, code, expected):
     assert str(caught.value).startswith(f"{file}{expected}")
     with pytest.raises(UserError, match="cannot be read"):
         load_user_file(tmp_path / "none.py")
+
+
+def test_files_that_would_mislead(tmp_path):
+    (tmp_path / "beside.py").write_text("K = 0.5\n")
+    file = tmp_path / "own.py"
+    file.write_text(f"import sys\nsys.path.insert(0, {str(tmp_path)!r})\nfrom beside import K\n")
+    with pytest.raises(UserError, match="neither installed nor part of the file"):
+        load_user_file(file)
+    file.write_text("x = 1\n")
+    with pytest.raises(UserError, match="registers nothing"):
+        load_user_file(file)
+    taken = PLAIN.format(name="linearised", trouble="")
+    file.write_text(taken)
+    with pytest.raises(UserError, match="`linearised` is already defined"):
+        load_user_file(file)
+
+
+def test_an_edited_file_takes_the_place_of_what_it_was(tmp_path):
+    from flyoff.registry import lookup
+
+    file = tmp_path / "own.py"
+    for scale in ("1.0", "3.0"):
+        code = PLAIN.format(name="plain-edited", trouble="").replace("= 1.0", f"= {scale}")
+        file.write_text(code)
+        load_user_file(file)
+        assert lookup("estimator", "plain-edited")().scale == float(scale)

@@ -36,7 +36,7 @@ def test_a_folder_reproduces(folder):
     lines = done.stdout.splitlines()
     assert lines[:2] == ["platform: as stored", "source: as stored"]
     assert "cells held to: relative 1e-06" in done.stdout
-    assert lines[-1] == "everything agrees"
+    assert lines[-1] == "everything that was compared agrees"
     assert not (folder / "again").exists()
 
 

@@ -74,5 +74,5 @@ def test_a_family_by_name():
 def test_a_file_without_an_estimator(tmp_path):
     file = tmp_path / "empty.py"
     file.write_text("x = 1\n")
-    with pytest.raises(UserError, match="registers no estimator"):
+    with pytest.raises(UserError, match="registers nothing"):
         api.vet(file)

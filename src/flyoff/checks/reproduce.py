@@ -22,11 +22,13 @@ from flyoff.study.config import Experiment, load_experiment, select
 from flyoff.study.custom import load_user_file
 from flyoff.study.run import Progress, carry_out
 from flyoff.study.store import environment, source_digest
+from flyoff.study.table import COLUMNS
 
 __all__ = ["Difference", "Reproduction", "compare_tables", "reload", "reproduce"]
 
 RELATIVE = 1e-6
 STANDARD_ERRORS = 3.0
+NOT_COMPARED = "not compared: another platform, a sampling family, no interval"
 RATIO_BAND = (0.4, 2.5)  # host noise between two timing passes
 _KEY = ["problem", "condition", "level", "estimator", "window", "quantity", "statistic"]
 _Z = 1.959964  # half width of a 95 % interval in standard errors
@@ -78,6 +80,8 @@ def reload(folder: Path) -> tuple[Experiment, dict[str, Any]]:
         raise UserError(f"{folder}: holds no results (no manifest.json)") from None
     except ValueError:
         raise UserError(f"{folder / 'manifest.json'}: is not JSON") from None
+    if not isinstance(manifest, dict) or not {"environment", "blocks", "seed"} <= set(manifest):
+        raise UserError(f"{folder / 'manifest.json'}: is not a manifest of results")
     for name in manifest.get("user files", {}):
         load_user_file(folder / Path(name).name)
     experiment = load_experiment(folder / "config.yaml")
@@ -91,6 +95,8 @@ def reproduce(folder: Path, jobs: int, progress: Progress | None = None) -> Repr
         stored = pd.read_csv(folder / "table.csv", keep_default_na=False, na_values=[""])
     except (OSError, ValueError) as why:
         raise UserError(f"{folder / 'table.csv'}: cannot be read ({why})") from None
+    if list(stored.columns) != COLUMNS:
+        raise UserError(f"{folder / 'table.csv'}: is not a whole table of results")
     with tempfile.TemporaryDirectory() as scratch:
         repeated = carry_out(experiment, Path(scratch) / "again", jobs, progress).table
     same = manifest.get("environment") == environment()
@@ -132,7 +138,7 @@ def compare_tables(
             fine = all(_close(getattr(a, c), getattr(b, c)) for c in ("value", "low", "high"))
             fine = fine and str(a.unit) == str(b.unit) and int(a.runs) == int(b.runs)
         elif math.isnan(a.low) or math.isnan(b.low) or math.isinf(a.high) or math.isinf(b.high):
-            rule, fine = "no interval to compare by", True
+            rule, fine = NOT_COMPARED, True
         else:
             rule = f"within {STANDARD_ERRORS:g} combined standard errors"
             error = math.hypot((a.high - a.low) / (2 * _Z), (b.high - b.low) / (2 * _Z))

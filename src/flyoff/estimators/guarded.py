@@ -33,7 +33,7 @@ class Guarded:
     def _try(self, step: int, do: Callable[[], Any]) -> Any:
         try:
             return do()
-        except Exception as why:
+        except (Exception, SystemExit) as why:
             text = f"{type(why).__name__}: {why}".splitlines()[0][:200]
             fault = np.full(self.runs, Fault.EXCEPTION, np.uint8)
             return _Broken(step, fault, (text,) * self.runs)

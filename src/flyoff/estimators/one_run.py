@@ -167,7 +167,7 @@ class _OneRunFilter:
                 if p is not None:
                     cov[:, :, r] = _shaped(p, (d, d), "covariance")
                     any_cov = True
-            except Exception as why:
+            except (Exception, SystemExit) as why:
                 fault[r] = Fault.EXCEPTION
                 messages[r] = f"{type(why).__name__}: {why}".splitlines()[0][:200]
         step = 0 if belief is None else belief.step

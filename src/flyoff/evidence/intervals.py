@@ -140,7 +140,10 @@ def _mean(values: Array, options: Mapping[str, Any]) -> Estimate:
         if worst > _TAIL:
             note = _joined(note, f"no interval: a run is {worst:.0f} times the median")
             return Estimate(float(v.mean()), units=len(v), note=note)
-    return Estimate(*student(v), len(v), note)
+    mean, low, high = student(v)
+    if "least" in options:  # an end beyond what the quantity can be says nothing
+        low, high = max(low, options["least"]), min(high, options.get("most", math.inf))
+    return Estimate(mean, low, high, len(v), note)
 
 
 def _pooled_rms(values: Array, options: Mapping[str, Any]) -> Estimate:

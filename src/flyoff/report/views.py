@@ -188,7 +188,7 @@ def _credibility(
         judged = typical if not math.isnan(typical) else mean
         mark = "" if math.isnan(judged) else _band_mark(judged)
         if recorded:
-            row = [n, f"{index.spread(n, windows, 'nees', 'mean')} {mark}", "-"]
+            row = [n, index.spread(n, windows, "nees", "mean"), "-"]
         else:
             row = [n, index.interval(n, window, "nees", "mean"), f"{number(typical)} {mark}"]
             row.append(_percent(index.value(n, window, "nees", "in-band")))

@@ -144,7 +144,8 @@ class Consistency(PlainScore):
     ) -> list[Statistic]:
         """Means with between-run intervals, in-band share of time, containment."""
         blocks = [b.name for b in model.space.blocks] if len(model.space.blocks) > 1 else []
-        heavy = {"heavy_tail": True}
+        heavy = {"heavy_tail": True, "least": 0.0}
+        share = {"least": 0.0, "most": 1.0}
         out = []
         for name in ["nees", *(f"nees.{b}" for b in blocks)]:
             d = model.space.d if name == "nees" else len(model.space.indices([name[5:]]))
@@ -154,7 +155,9 @@ class Consistency(PlainScore):
                 Statistic(name, "in-band", f"profile:{name}", "in-band", options={"size": d})
             )
             for s in (1, 2, 3):
-                out.append(Statistic(name, f"inside-{s}s", f"{name}/inside-{s}s", "mean"))
+                out.append(
+                    Statistic(name, f"inside-{s}s", f"{name}/inside-{s}s", "mean", options=share)
+                )
         for sensor in model.sensors:
             key = f"nis.{sensor}/mean"
             out.append(Statistic(f"nis.{sensor}", "mean", key, "mean", options=heavy))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 import re
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
@@ -137,6 +138,7 @@ def load_experiment(path: Path) -> Experiment:
     conditions = _conditions(check, raw, problems)
     estimators = _estimators(check, raw, problems)
     if spec is not None and not check.errors:
+        _every_problem_is_used(check, problems, conditions, estimators)
         _suits(check, problems, estimators)
     check.stop()
     assert spec is not None
@@ -175,7 +177,16 @@ def select(experiment: Experiment, only: Sequence[str]) -> Experiment:
                 f"--only {name}: no problem, condition or estimator of that name"
                 f"{nearest(name, known)}"
             )
-    return dataclasses.replace(experiment, **kept, only=tuple(only))
+    part = dataclasses.replace(experiment, **kept, only=tuple(only))
+    used = tuple(
+        p
+        for p in part.problems
+        if any(c.applies(p.name) for c in part.conditions)
+        and any(e.applies(p.name) for e in part.estimators)
+    )
+    if not used:
+        raise UserError(f"--only {' '.join(only)}: no cell of the experiment is left")
+    return dataclasses.replace(part, problems=used)
 
 
 class _Check:
@@ -248,10 +259,10 @@ class _Check:
 
 def _rule(kind: str, ctx: Mapping[str, Any], message: str) -> str:
     rules = {
-        "greater_than": "must be greater than {gt:g}",
-        "greater_than_equal": "must be at least {ge:g}",
-        "less_than": "must be less than {lt:g}",
-        "less_than_equal": "must be at most {le:g}",
+        "greater_than": "must be greater than {gt:.10g}",
+        "greater_than_equal": "must be at least {ge:.10g}",
+        "less_than": "must be less than {lt:.10g}",
+        "less_than_equal": "must be at most {le:.10g}",
         "too_short": "must not be empty",
         "finite_number": "must be a finite number",
         "string_pattern_mismatch": "must be a name of letters, digits, `.`, `_`, `-`, at most 64",
@@ -325,7 +336,7 @@ def _plain_units(cls: Any, data: Any) -> tuple[Any, dict[str, str]]:
     for key, value in data.items():
         for token, unit in suffixes.items():
             name = key[: -len(token) - 1] if key.endswith("_" + token) else ""
-            if key not in fields and name in fields and name not in data:
+            if key not in fields and name in fields and name not in data and name not in out:
                 out[name] = f"{value} {unit}" if not isinstance(value, bool) else value
                 renamed[name] = key
                 break
@@ -424,6 +435,10 @@ def _windows(
                 f"must start before it ends and within the {end:g} s of `{path[-1]}`, "
                 f"got {_show(pair[0])} to {_show(pair[1])}",
             )
+            continue
+        step = problem.step
+        if math.floor(b / step + 1e-9) < math.floor(a / step + 1e-9) + 1:
+            check.error((*where, name), f"holds no step of `{path[-1]}` ({step:g} s each)")
             continue
         out.append((name, a, b))
     return tuple(out)
@@ -536,9 +551,25 @@ def _estimators(check: _Check, raw: dict[str, Any], problems: Any) -> tuple[Entr
     return tuple(out)
 
 
+def _every_problem_is_used(
+    check: _Check,
+    problems: dict[str, ProblemEntry],
+    conditions: Iterable[Entry],
+    estimators: Iterable[Entry],
+) -> None:
+    for name in problems:
+        for kind, entries in (("condition", conditions), ("estimator", estimators)):
+            if not any(e.applies(name) for e in entries):
+                check.error(("problems", name), f"no {kind} applies to it")
+
+
 def _suits(check: _Check, problems: dict[str, ProblemEntry], estimators: Iterable[Entry]) -> None:
     for entry in problems.values():
-        model = entry.problem.filter_model()
+        try:
+            model = entry.problem.filter_model()
+        except Exception as error:
+            check.error(("problems", entry.name), f"its parameters give no model ({error})")
+            continue
         for estimator in estimators:
             if not estimator.applies(entry.name):
                 continue
@@ -549,6 +580,8 @@ def _suits(check: _Check, problems: dict[str, ProblemEntry], estimators: Iterabl
                     rule.points(model.space.d)
             except UserError as error:
                 why = str(error)
+            except Exception as error:
+                why = f"{type(error).__name__}: {error}"
             if why is not None:
                 check.error(
                     ("estimators", estimator.name),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import concurrent.futures as futures
+import contextlib
 import multiprocessing
 import os
 import signal
@@ -162,6 +163,18 @@ def _start_worker(files: Sequence[Path] = ()) -> None:
     threading.Thread(target=watch, daemon=True).start()
 
 
+@contextlib.contextmanager
+def _ctrl_c_ignored() -> Iterator[None]:
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    old = signal.signal(signal.SIGINT, signal.SIG_IGN)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, old)
+
+
 def run_units(
     work: Sequence[Unit], folder: Path, jobs: int, advance: Callable[[Sequence[str]], None]
 ) -> None:
@@ -183,7 +196,8 @@ def run_units(
         initargs=(files_of(b.cell.estimator.what for unit in work for b in unit.blocks),),
     )
     try:
-        pending = [pool.submit(evaluate, unit, str(folder)) for unit in work]
+        with _ctrl_c_ignored():  # workers are born deaf to it: the parent decides
+            pending = [pool.submit(evaluate, unit, str(folder)) for unit in work]
         for future in futures.as_completed(pending):
             advance(future.result())
     except BaseException:

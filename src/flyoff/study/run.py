@@ -24,6 +24,7 @@ from flyoff.study.table import CellData, build_table, merge_blocks, runs_frame, 
 
 __all__ = ["Progress", "Study", "carry_out", "write_atomically"]
 
+_TIMED = {"time", "time_low", "time_high", "ratio", "ratio_low", "ratio_high", "to", "batch"}
 Progress = Callable[[str, int, int], None]
 
 
@@ -60,6 +61,7 @@ def carry_out(
         For a folder that cannot be written or that another run holds.
     """
     check_memory(experiment, jobs)
+    files_of(e.what for e in experiment.estimators)  # clashing names are refused before the work
     store = Store(folder)
     store.create()
     with store.lock():
@@ -124,9 +126,14 @@ def _costs(
         late=experiment.late,
     )
     file = store.folder / f"timing-{key}.json"
+    wanted = {(c.problem.name, c.estimator.name) for c in cells(experiment)}
     try:
         saved = json.loads(file.read_text())
-    except (OSError, ValueError):
+        whole = {(row["problem"], row["estimator"]) for row in saved} == wanted
+        whole = whole and all(set(row) >= _TIMED for row in saved)
+    except (OSError, ValueError, TypeError, KeyError):
+        whole = False
+    if not whole:
         if progress is not None:
             progress("timing", 0, 1)
         measured = time_cells(experiment)

@@ -181,7 +181,12 @@ class Store:
         UserError
             If another process holds it. The lock ends with its process, however that ends.
         """
-        file = open(self.folder / "lock", "a+b")  # noqa: SIM115 - held for the whole run
+        try:
+            file = open(self.folder / "lock", "a+b")  # noqa: SIM115 - held for the whole run
+        except OSError as why:
+            raise UserError(
+                f"{self.folder / 'lock'}: cannot be opened ({why.strerror})", code=1
+            ) from None
         try:
             try:
                 import fcntl

@@ -62,7 +62,10 @@ def read_yaml(path: Path) -> Tree:
     """
     name = str(path)
     try:
-        raw = path.read_bytes()
+        if path.exists() and not path.is_file():
+            raise UserError(f"{name}: is not a file")
+        with path.open("rb") as file:
+            raw = file.read(MAX_BYTES + 1)
     except FileNotFoundError:
         raise UserError(f"{name}: no such file") from None
     except OSError as why:
