@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import os
 import sys
+import threading
 from collections.abc import Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -54,7 +55,11 @@ def main() -> None:
             file=sys.stderr,
             flush=True,
         )
-        os._exit(1)  # workers are gone; nothing is left to wait for
+        # workers are gone; should their pool not notice, nothing is worth waiting for
+        last = threading.Timer(5.0, os._exit, (1,))
+        last.daemon = True
+        last.start()
+        sys.exit(1)
     except BrokenPipeError:
         sys.exit(1)
     except Exception as why:
