@@ -16,7 +16,7 @@ from typing import TypeVar
 
 from flyoff.errors import UserError, nearest
 
-__all__ = ["KINDS", "citation", "discover", "forget", "lookup", "names", "register"]
+__all__ = ["KINDS", "citation", "discover", "forget", "lookup", "register"]
 
 # Where each kind lives. Dynamic imports: the registry itself depends on nothing above it.
 _HOMES = {
@@ -81,11 +81,6 @@ def forget(module: str) -> None:
 def citation(kind: str, name: str) -> str:
     """The publication a registered class follows; empty if it names none."""
     return _cited.get((kind, name), "")
-
-
-def names(kind: str) -> list[str]:
-    """Names known for `kind`, sorted."""
-    return list(discover(kind))
 
 
 def lookup(kind: str, name: str) -> type:

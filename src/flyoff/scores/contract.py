@@ -15,6 +15,7 @@ A failed run gives NaN; reductions count it, they never drop it silently.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Protocol, TypeVar
@@ -27,7 +28,16 @@ from flyoff.numerics.spaces import Array
 from flyoff.problems.contract import Alignment, Quantity
 from flyoff.recordings import Recording
 
-__all__ = ["Context", "Divergence", "PlainScore", "Score", "Statistic", "Window", "held"]
+__all__ = [
+    "Context",
+    "Divergence",
+    "PlainScore",
+    "Score",
+    "Statistic",
+    "Window",
+    "held",
+    "window_steps",
+]
 
 T = TypeVar("T")
 
@@ -44,6 +54,11 @@ class Window:
     def slice(self) -> slice:
         """Rows of an array whose row 0 is step 1."""
         return slice(self.first - 1, self.last)
+
+
+def window_steps(start: float, end: float, dt: float) -> tuple[int, int]:
+    """First and last step, from one, of a window in seconds: a step belongs where it ends."""
+    return math.floor(start / dt + 1e-9) + 1, math.floor(end / dt + 1e-9)
 
 
 @dataclass(frozen=True)

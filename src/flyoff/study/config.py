@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import dataclasses
-import math
 import re
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
@@ -14,7 +13,7 @@ from pydantic import BaseModel, ConfigDict, Field, TypeAdapter, ValidationError
 from flyoff.errors import UserError, nearest
 from flyoff.options import Count, Positive, Unit, convert, suffix_units
 from flyoff.registry import discover
-from flyoff.scores.contract import Divergence
+from flyoff.scores.contract import Divergence, window_steps
 from flyoff.study.yaml_tree import Path_, Tree, read_yaml
 
 __all__ = ["Entry", "Experiment", "ProblemEntry", "load_experiment", "select"]
@@ -207,7 +206,7 @@ class _Check:
         if self.errors:
             raise UserError(*sorted(self.errors, key=lambda e: self.errors[e]))
 
-    def model(self, cls: Any, data: Any, path: Path_, hide: Iterable[str] = ()) -> Any:
+    def model(self, cls: Any, data: Any, path: Path_) -> Any:
         """Validate `data` as a pydantic class; None if there was a mistake."""
         data, renamed = _plain_units(cls, data)
         try:
@@ -437,7 +436,8 @@ def _windows(
             )
             continue
         step = problem.step
-        if math.floor(b / step + 1e-9) < math.floor(a / step + 1e-9) + 1:
+        first, last = window_steps(a, b, step)
+        if last < first:
             check.error((*where, name), f"holds no step of `{path[-1]}` ({step:g} s each)")
             continue
         out.append((name, a, b))

@@ -16,7 +16,7 @@ from flyoff.numerics.streams import Streams
 from flyoff.problems.conditions import apply_to_model, apply_to_recording, initial_error_scale
 from flyoff.recordings import Recording
 from flyoff.registry import discover
-from flyoff.scores.contract import Context, Window
+from flyoff.scores.contract import Context, Window, window_steps
 from flyoff.study.config import Entry, Experiment, ProblemEntry
 from flyoff.study.custom import digest_of
 from flyoff.study.store import CHUNK, content_key
@@ -157,9 +157,8 @@ def make_context(problem: ProblemEntry, model: Model, recording: Recording) -> C
     dt, last = recording.dt, recording.steps
     windows = []
     for name, start, end in problem.windows:
-        # a step belongs to the window that holds its end
-        first = max(1, math.floor(start / dt + 1e-9) + 1)
-        windows.append(Window(name, first, min(last, math.floor(end / dt + 1e-9))))
+        first, final = window_steps(start, end, dt)
+        windows.append(Window(name, first, min(last, final)))
     p = problem.problem
     return Context(
         model,

@@ -13,7 +13,7 @@ import pandas as pd
 from flyoff.evidence.intervals import FEWEST_UNITS, REDUCTIONS, Estimate, nees_band
 from flyoff.numerics.spaces import Array
 from flyoff.registry import discover
-from flyoff.scores.contract import Statistic
+from flyoff.scores.contract import Statistic, window_steps
 from flyoff.study.plan import Cell
 
 __all__ = ["COLUMNS", "CellData", "build_table", "merge_blocks", "runs_frame", "write_csv"]
@@ -185,8 +185,8 @@ def _in_band(d: CellData, window: str, s: Statistic) -> Estimate:
 def _window_steps(d: CellData, window: str) -> tuple[int, int]:
     for name, start, end in d.cell.problem.windows:
         if name == window:
-            dt = d.cell.problem.problem.step
-            return max(1, math.floor(start / dt + 1e-9) + 1) - 1, math.floor(end / dt + 1e-9)
+            first, last = window_steps(start, end, d.cell.problem.problem.step)
+            return first - 1, last
     raise KeyError(window)
 
 
